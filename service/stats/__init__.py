@@ -1,0 +1,1 @@
+"""Pure mathematics of the decision: arrays in, frozen results out."""
