@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import ClassVar
+from typing import ClassVar, Self
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,6 +56,14 @@ class ServiceError(Exception):
         self.detail = detail
         self.faults = tuple(faults)
 
+    def below(self, prefix: str) -> Self:
+        """Return the same error seen from a document that holds this one at `prefix`."""
+        return type(self)(self.detail, [fault.below(prefix) for fault in self.faults])
+
+    def at(self, pointer: str) -> Self:
+        """Return the same error with itself as its one fault, at `pointer`."""
+        return type(self)(self.detail, [Fault(pointer, self.detail, self.code)])
+
 
 # --- The caller must act -----------------------------------------------------
 
@@ -102,6 +110,12 @@ class IdempotencyConflictError(ServiceError):
     code = "idempotency-key-reused"
 
 
+class PreconditionError(ServiceError):
+    """The thing is not as the caller saw it last (``If-Match``)."""
+
+    code = "precondition-failed"
+
+
 # --- The statistician must act -----------------------------------------------
 
 
@@ -142,6 +156,12 @@ class KeyUnavailableError(ServiceError):
     """The signing key cannot be read, or its file is open to others."""
 
     code = "key-unavailable"
+
+
+class ConfigurationError(ServiceError):
+    """A setting is unknown or cannot be read."""
+
+    code = "configuration"
 
 
 # --- The auditor must act ----------------------------------------------------

@@ -1,0 +1,1 @@
+"""Shapes on the wire.  They check form; meaning is checked where it is used."""

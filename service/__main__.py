@@ -1,0 +1,5 @@
+"""``python -m service`` is the command ``acceptance``."""
+
+from service.cli import main
+
+main()

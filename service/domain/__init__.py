@@ -1,0 +1,1 @@
+"""What a decision means: batch <- specification <- policy <- record, and nothing of HTTP or storage."""

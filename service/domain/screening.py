@@ -1,0 +1,111 @@
+"""Run every screen of a specification on a batch, each under its own rule."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from types import MappingProxyType
+from typing import Any, Literal
+
+from service.domain.batch import Batch
+from service.domain.completeness import completeness
+from service.domain.specification import SCREEN_NAMES, ScreenRule, Specification
+from service.stats import dispersion, normality, ordering, outliers, resolution, robust, shapiro_wilk
+from service.stats.arrays import Matrix
+from service.stats.moments import Moments
+from service.stats.null_laws import NullLaws
+from service.stats.screen import ScreenStatistic, not_applicable
+
+State = Literal["met", "not-met", "not-applicable"]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Evidence:
+    """What screens look at.
+
+    Parameters
+    ----------
+    batch : Batch
+        As posted.
+    specification : Specification
+        The rule.
+    rows : ndarray, shape (n, p)
+        Values in the specification's order.
+    moments : Moments
+        Of `rows` about the target.
+    null_laws : NullLaws
+        Provider of exact null laws.
+    """
+
+    batch: Batch
+    specification: Specification
+    rows: Matrix
+    moments: Moments
+    null_laws: NullLaws
+
+
+@dataclass(frozen=True, slots=True)
+class Finding:
+    """One screen's result under its rule.
+
+    Parameters
+    ----------
+    name : str
+        Screen name.
+    rule : ScreenRule
+        Level, and what a failure does.
+    result : ScreenStatistic
+        What was computed.
+    """
+
+    name: str
+    rule: ScreenRule
+    result: ScreenStatistic
+
+    @property
+    def state(self) -> State:
+        """Whether the screen is met; one without a p-value is met where it found nothing."""
+        if not self.result.applicable:
+            return "not-applicable"
+        if self.result.p_value is None:
+            return "not-met" if self.result.statistic else "met"
+        return "not-met" if self.result.p_value <= self.rule.level else "met"
+
+    @property
+    def holds(self) -> bool:
+        """Whether this finding keeps the lot from being decided."""
+        if self.state == "not-applicable":
+            return self.rule.required
+        return self.state == "not-met" and self.rule.on_failure == "hold"
+
+    def to_dict(self) -> dict[str, Any]:
+        """Return the member of a record's ``screens``."""
+        result = self.result
+        document: dict[str, Any] = {
+            "name": self.name,
+            "statistic": result.statistic,
+            "p_value": result.p_value,
+            "law": result.law,
+            "level": self.rule.level,
+            "state": self.state,
+            "on_failure": self.rule.on_failure,
+            "units": list(result.units),
+            "detail": dict(result.detail),
+        }
+        if result.asymptotic_p_value is not None:
+            document["asymptotic_p_value"] = result.asymptotic_p_value
+        if not result.applicable:
+            document["detail"]["why"] = result.why
+        return document
+
+
+def screen_all(evidence: Evidence) -> tuple[Finding, ...]:
+    """Return the finding of every screen, in the order of `SCREEN_NAMES`."""
+    rules = evidence.specification.screens
+    return tuple(Finding(name, rules[name], _SCREENS[name](evidence, rules[name])) for name in SCREEN_NAMES)
+
+
+def screen_completeness(batch: Batch, specification: Specification) -> Finding:
+    """Return the finding of the one screen that can be made where values are missing."""
+    rule = specification.screens["completeness"]
+    return Finding("completeness", rule, completeness(batch, batch.rows, batch.names))

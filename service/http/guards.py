@@ -1,0 +1,103 @@
+"""What a request meets before a view sees it: size, media type, strict JSON, the schema."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from flask import current_app, request
+from marshmallow import Schema, ValidationError
+from werkzeug.exceptions import NotAcceptable, RequestEntityTooLarge, UnsupportedMediaType
+
+from service.errors import InvalidContentError, MalformedRequestError
+from service.http.problems import refused
+from service.signing.canonical import inexact_numbers, strict_loads
+
+JSON = "application/json"
+
+
+def read_body() -> bytes:
+    """Return the body, whole.
+
+    Raises
+    ------
+    UnsupportedMediaType
+        Where it is not declared as plain application/json.
+    RequestEntityTooLarge
+        Where it is larger than the limit, also when sent in chunks.
+    """
+    if request.mimetype != JSON:
+        raise UnsupportedMediaType(f"Send the body as {JSON}; this one is {request.mimetype or 'of no declared type'}.")
+    if request.headers.get("Content-Encoding", "identity") != "identity":
+        raise UnsupportedMediaType("Send the body without Content-Encoding.")
+    limit = int(current_app.config["BODY_LIMIT"])
+    try:
+        body = request.get_data(cache=False)
+    except RequestEntityTooLarge as error:
+        raise _too_large(limit) from error
+    # A chunked body is cut silently at MAX_CONTENT_LENGTH, which is therefore one byte above the limit.
+    if len(body) > limit:
+        raise _too_large(limit)
+    return body
+
+
+def _too_large(limit: int) -> RequestEntityTooLarge:
+    return RequestEntityTooLarge(f"The body is larger than {limit} bytes, the most this site takes.")
+
+
+def load_body(body: bytes, schema: Schema) -> dict[str, Any]:
+    """Return the body as the schema gives it.
+
+    Raises
+    ------
+    MalformedRequestError
+        Where it is not one strict JSON object.
+    InvalidContentError
+        Where the schema refuses it, or a number cannot be kept as it is written; with every fault.
+    """
+    document = strict_loads(body)
+    if not isinstance(document, dict):
+        raise MalformedRequestError("The body is JSON, but not an object.")
+    try:
+        loaded: dict[str, Any] = schema.load(document)
+    except ValidationError as error:
+        raise refused(error) from error
+    faults = inexact_numbers(body)
+    if faults:
+        raise InvalidContentError("Numbers in the body have more digits than can be kept.", faults)
+    return loaded
+
+
+def load_query(schema: Schema) -> dict[str, Any]:
+    """Return the query parameters as the schema gives them.
+
+    Raises
+    ------
+    MalformedRequestError
+        Where one is unknown, repeated or cannot be read.
+    """
+    repeated = [name for name, values in request.args.lists() if len(values) > 1]
+    if repeated:
+        raise MalformedRequestError(f"Give each query parameter once: {', '.join(repeated)}.")
+    try:
+        loaded: dict[str, Any] = schema.load(request.args.to_dict())
+    except ValidationError as error:
+        faults = refused(error).faults
+        text = " ".join(f"{fault.pointer.removeprefix('/')}: {fault.detail}" for fault in faults)
+        raise MalformedRequestError(f"The query cannot be read. {text}", faults) from error
+    return loaded
+
+
+def negotiate(*offers: str) -> str:
+    """Return the media type, among those offered, that the client likes best.
+
+    Raises
+    ------
+    NotAcceptable
+        Where it takes none of them.
+    """
+    if "Accept" not in request.headers:
+        return offers[0]
+    best = request.accept_mimetypes.best_match(offers)
+    if best is None:
+        raise NotAcceptable(f"This is offered as {', '.join(offers)}.")
+    return str(best)

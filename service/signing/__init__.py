@@ -1,0 +1,1 @@
+"""Bytes to signed bytes: canonical text, envelopes, keys.  Knows no statistics."""
