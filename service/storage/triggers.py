@@ -39,7 +39,7 @@ def sqlite_triggers(names: Sequence[str] = ALL) -> Iterator[tuple[str, str]]:
             name,
             f"CREATE TRIGGER {name} BEFORE INSERT ON {table.name} WHEN EXISTS "
             f"(SELECT 1 FROM {table.name} WHERE {_taken(table)}) "
-            f"BEGIN SELECT RAISE(ABORT, '{table.name} is append-only: the key is taken'); END",  # noqa: S608 - our names
+            f"BEGIN SELECT RAISE(ABORT, '{table.name} is append-only: the key is taken'); END",
         )
 
 
