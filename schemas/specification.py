@@ -12,16 +12,11 @@ from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, 
 
 SCREENS = (
     "completeness",
-    "resolution",
     "outlying-against-specification",
     "outlying-within-batch",
-    "outlying-robust",
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",
-    "marginal-normality",
-    "dispersion",
-    "order-dependence",
 )
 
 
@@ -98,7 +93,7 @@ class ScreenSchema(Shape):
     """How one screen is applied."""
 
     level = Number(above=0, most=0.5)
-    on_failure = Choice("hold", "note", "sign-flip")
+    on_failure = Choice("hold", "note")
     required = Flag()
 
 

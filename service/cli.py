@@ -1,4 +1,7 @@
-"""The command ``acceptance``.  Each command imports what it needs, so that ``verify`` needs neither Flask nor a store."""
+"""The command ``acceptance``.
+
+Each command imports what it needs, so that ``verify`` needs neither Flask nor a store.
+"""
 
 from __future__ import annotations
 
@@ -81,9 +84,9 @@ def token() -> None:
 @click.option("--days", type=click.IntRange(1), help="Days until it expires; never where left out.")
 def token_new(name: str, roles: tuple[str, ...], days: int | None) -> None:
     """Issue a token for NAME, a person or machine, and print it once."""
-    from service.procedures.tokens import OPERATOR, as_roles, issue
+    from service.procedures.tokens import OPERATOR, issue
 
-    click.echo(issue(_site(), OPERATOR, name, as_roles(roles), days))
+    click.echo(issue(_site(), OPERATOR, name, roles, days))
 
 
 @token.command("list")
@@ -92,23 +95,13 @@ def token_list(as_json: bool) -> None:
     """List tokens, without their secrets."""
     with _site().store.reading() as view:
         rows = view.tokens()
-    documents = [
-        {
-            "token_id": row.token_id,
-            "subject": row.subject,
-            "roles": list(row.roles),
-            "issued_at": row.issued_at,
-            "expires_at": row.expires_at,
-            "revoked_at": row.revoked_at,
-        }
-        for row in rows
-    ]
     if as_json:
-        click.echo(json.dumps(documents, indent=2))
+        shown = ("token_id", "subject", "roles", "issued_at", "expires_at", "revoked_at")
+        click.echo(json.dumps([{member: getattr(row, member) for member in shown} for row in rows], indent=2))
         return
-    for item in documents:
-        state = f"revoked {item['revoked_at']}" if item["revoked_at"] else f"expires {item['expires_at'] or 'never'}"
-        click.echo(f"{item['token_id']}  {item['subject']}  {','.join(item['roles'])}  {state}")
+    for row in rows:
+        state = f"revoked {row.revoked_at}" if row.revoked_at else f"expires {row.expires_at or 'never'}"
+        click.echo(f"{row.token_id}  {row.subject}  {','.join(row.roles)}  {state}")
 
 
 @token.command("revoke")

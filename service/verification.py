@@ -22,11 +22,12 @@ from dataclasses import dataclass
 from typing import Any
 
 from service.domain.batch import Batch
-from service.domain.policy import POLICY_VERSION, NullLaws, evaluate
+from service.domain.policy import POLICY_VERSION, evaluate
 from service.domain.specification import Specification
 from service.errors import Fault, RecomputationMismatchError, UnknownFormatError, VerificationError
 from service.signing import canonical
 from service.signing.envelope import TrustedKeys, open_envelope
+from service.stats.null_laws import NullLaws
 
 BUNDLE_FORMAT = "acceptance-bundle/1"
 

@@ -70,7 +70,7 @@ class Demonstration:
     @contextmanager
     def service(self) -> Iterator[str]:
         """Run the service on a free port and yield its address; stop it by its process on the way out."""
-        process = subprocess.Popen(  # noqa: S603 - this program itself
+        process = subprocess.Popen(
             [sys.executable, "-m", "service", "serve", "--port", "0"],
             env=self.environment,
             stdout=subprocess.PIPE,

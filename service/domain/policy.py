@@ -102,13 +102,14 @@ def evaluate(batch: Batch, specification: Specification, null_laws: NullLaws, *,
         return _without_values(batch, specification, assumptions)
     moments = sample_moments(rows, specification.target)
     test = mean_test_of(specification, moments)
-    screens = screen_all(Evidence(batch, specification, rows, moments, null_laws))
-    verdict = answer(specification, moments, test, screens)
+    screens = screen_all(Evidence(batch, specification, rows, moments, null_laws.get(moments.units, moments.dimension)))
+    follow_up = documents.follow_up(specification, test)
+    verdict = answer(specification, test, moments.units, follow_up)
     outcome, reasons = conclude(verdict, screens, batch)
     numbers = {
         "test": documents.test(specification, test, verdict),
         "mean": (specification.target + test.difference).tolist(),
-        "follow_up": documents.follow_up(specification, test),
+        "follow_up": follow_up,
         "screens": [finding.to_dict() for finding in screens],
         "power": documents.power(specification, test, verdict),
     }

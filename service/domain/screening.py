@@ -10,10 +10,10 @@ from typing import Any, Literal
 from service.domain.batch import Batch
 from service.domain.completeness import completeness
 from service.domain.specification import SCREEN_NAMES, ScreenRule, Specification
-from service.stats import dispersion, normality, ordering, outliers, resolution, robust, shapiro_wilk
+from service.stats import normality, outliers
 from service.stats.arrays import Matrix
 from service.stats.moments import Moments
-from service.stats.null_laws import NullLaws
+from service.stats.null_laws import NullTable
 from service.stats.screen import ScreenStatistic, not_applicable
 
 State = Literal["met", "not-met", "not-applicable"]
@@ -33,15 +33,15 @@ class Evidence:
         Values in the specification's order.
     moments : Moments
         Of `rows` about the target.
-    null_laws : NullLaws
-        Provider of exact null laws.
+    table : NullTable or None
+        Exact null laws at this size, where there are any.
     """
 
     batch: Batch
     specification: Specification
     rows: Matrix
     moments: Moments
-    null_laws: NullLaws
+    table: NullTable | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,3 +109,44 @@ def screen_completeness(batch: Batch, specification: Specification) -> Finding:
     """Return the finding of the one screen that can be made where values are missing."""
     rule = specification.screens["completeness"]
     return Finding("completeness", rule, completeness(batch, batch.rows, batch.names))
+
+
+def _completeness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return completeness(evidence.batch, evidence.rows, evidence.specification.names)
+
+
+def _against_specification(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    specification = evidence.specification
+    if specification.sigma0 is None:
+        return not_applicable("the specification has no reference covariance")
+    return outliers.against_specification(
+        evidence.moments, specification.sigma0, rule.level, specification.target_units
+    )
+
+
+def _within_batch(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return outliers.within_batch(evidence.moments, evidence.table, rule.level)
+
+
+def _skewness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.skewness(evidence.moments, evidence.table)
+
+
+def _kurtosis(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.kurtosis(evidence.moments, evidence.table)
+
+
+def _henze_zirkler(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.henze_zirkler(evidence.moments, evidence.table)
+
+
+_SCREENS: Mapping[str, Callable[[Evidence, ScreenRule], ScreenStatistic]] = MappingProxyType(
+    {
+        "completeness": _completeness,
+        "outlying-against-specification": _against_specification,
+        "outlying-within-batch": _within_batch,
+        "mardia-skewness": _skewness,
+        "mardia-kurtosis": _kurtosis,
+        "henze-zirkler": _henze_zirkler,
+    }
+)

@@ -17,25 +17,18 @@ from service.stats.arrays import Matrix, Vector, frozen
 from service.stats.covariance import Covariance, factor_covariance
 
 CovarianceKind = Literal["known", "reference", "batch", "pooled"]
-OnFailure = Literal["hold", "note", "sign-flip"]
+OnFailure = Literal["hold", "note"]
 
 SCREEN_NAMES = (
     "completeness",
-    "resolution",
     "outlying-against-specification",
     "outlying-within-batch",
-    "outlying-robust",
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",
-    "marginal-normality",
-    "dispersion",
-    "order-dependence",
 )
 """Every screen, in the order in which records list them."""
 
-# These two explain; they hold a lot only where the specification says so.
-_NOTED_BY_DEFAULT = frozenset({"marginal-normality", "resolution"})
 _SYMMETRY = 1e-12
 
 
@@ -47,7 +40,7 @@ class ScreenRule:
     ----------
     level : float
         Significance level of the screen.
-    on_failure : {"hold", "note", "sign-flip"}
+    on_failure : {"hold", "note"}
         What a screen that is not met does.
     required : bool
         Whether a screen that cannot be computed holds the lot.
@@ -63,7 +56,7 @@ class ScreenRule:
 
 @dataclass(frozen=True, slots=True)
 class Question:
-    """What is asked of the mean: is it different, or is it close enough?
+    """What is asked of the mean: whether it differs, or whether it is close enough.
 
     Parameters
     ----------
@@ -199,11 +192,10 @@ def _screen_rules(data: Mapping[str, Mapping[str, Any]]) -> Mapping[str, ScreenR
     rules = {}
     for name in SCREEN_NAMES:
         given = data.get(name)
-        usual: OnFailure = "note" if name in _NOTED_BY_DEFAULT else "hold"
         settings = given or {}
         rules[name] = ScreenRule(
             level=settings.get("level", 0.01),
-            on_failure=settings.get("on_failure", usual),
+            on_failure=settings.get("on_failure", "hold"),
             required=settings.get("required", False),
             listed=given is not None,
         )

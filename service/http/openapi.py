@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import re
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from http import HTTPStatus
 from typing import Any
 
@@ -47,7 +47,7 @@ def document(operations: Sequence[Operation]) -> dict[str, Any]:
         servers=[{"url": "/", "description": "This service"}],
     )
     assert plugin.converter is not None
-    plugin.converter.add_attribute_function(_own_field)
+    plugin.converter.add_attribute_function(_own_field)  # type: ignore[no-untyped-call]
     spec.components.security_scheme("token", {"type": "http", "scheme": "bearer"})
     spec.components.schema("Problem", schema=ProblemSchema)
     for status in sorted({status for operation in operations for status in operation.problems}):
@@ -62,15 +62,14 @@ def to_yaml(described: dict[str, Any]) -> str:
     """Return the document as YAML, the same bytes every time and without anchors."""
 
     class Plain(yaml.SafeDumper):
-        def ignore_aliases(self, data: Any) -> bool:  # noqa: ARG002
+        def ignore_aliases(self, data: Any) -> bool:
             return True
 
     return yaml.dump(described, Dumper=Plain, sort_keys=False, allow_unicode=True, width=110)
 
 
-def _schema_name(schema: type[Schema] | Schema) -> str | None:
-    kind = schema if isinstance(schema, type) else type(schema)
-    return kind.__name__.removesuffix("Schema")
+def _schema_name(schema: type[Schema]) -> str:
+    return schema.__name__.removesuffix("Schema")
 
 
 def _described(operation: Operation) -> dict[str, Any]:
@@ -121,35 +120,43 @@ def _problem_response(status: int) -> dict[str, Any]:
 
 
 def _own_field(self: Any, field: fields.Field[Any], **_: Any) -> dict[str, Any]:
-    """Describe the fields that are our own, and the bounds that JSON Schema has words for."""
-    number_or_null = {"type": ["number", "null"]}
-    match field:
-        case own.Number():
-            bounds = {
-                "exclusiveMinimum": field.above,
-                "exclusiveMaximum": field.below,
-                "minimum": field.least,
-                "maximum": field.most,
-            }
-            return {"type": "number"} | {name: bound for name, bound in bounds.items() if bound is not None}
-        case own.Matrix():
-            cell = number_or_null if field.missing_allowed else {"type": "number"}
-            row = {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_COLUMNS, "items": cell}
-            return {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_ROWS, "items": row}
-        case own.Sequence():
-            return {"type": "array", "minItems": 1, "items": {"type": ["number", "string"]}}
-        case own.Code():
-            return {"type": "string", "pattern": f"^{own.Code.PATTERN.pattern}$"}
-        case own.Text():
-            return {"type": "string", "minLength": 1, "maxLength": field.longest}
-        case own.Choice():
-            return {"type": "string", "enum": list(field.words)}
-        case own.Instant():
-            return {"type": "string", "format": "date-time"}
-        case NamedOrWhole():
-            shapes = (SpecificationReferenceSchema, SpecificationSchema)
-            return {"oneOf": [self.resolve_nested_schema(shape) for shape in shapes]}
+    """Describe the fields that are our own."""
+    if isinstance(field, NamedOrWhole):
+        shapes = (SpecificationReferenceSchema, SpecificationSchema)
+        return {"oneOf": [self.resolve_nested_schema(shape) for shape in shapes]}
+    for kind, describe in _OWN.items():
+        if isinstance(field, kind):
+            described: dict[str, Any] = describe(field)
+            return described
     return {}
+
+
+def _number(field: own.Number) -> dict[str, Any]:
+    bounds = {
+        "exclusiveMinimum": field.above,
+        "exclusiveMaximum": field.below,
+        "minimum": field.least,
+        "maximum": field.most,
+    }
+    return {"type": "number"} | {name: bound for name, bound in bounds.items() if bound is not None}
+
+
+def _matrix(field: own.Matrix) -> dict[str, Any]:
+    cell: dict[str, Any] = {"type": ["number", "null"] if field.missing_allowed else "number"}
+    row = {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_COLUMNS, "items": cell}
+    return {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_ROWS, "items": row}
+
+
+_OWN: dict[type[fields.Field[Any]], Callable[[Any], dict[str, Any]]] = {
+    own.Number: _number,
+    own.Matrix: _matrix,
+    own.Sequence: lambda _: {"type": "array", "minItems": 1, "items": {"type": ["number", "string"]}},
+    own.Code: lambda field: {"type": "string", "pattern": f"^{field.PATTERN.pattern}$"},
+    own.Text: lambda field: {"type": "string", "minLength": 1, "maxLength": field.longest},
+    own.Choice: lambda field: {"type": "string", "enum": list(field.words)},
+    own.Instant: lambda _: {"type": "string", "format": "date-time"},
+}
+"""From a field to its JSON Schema; the more special kinds first."""
 
 
 if __name__ == "__main__":

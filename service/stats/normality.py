@@ -20,12 +20,87 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from functools import lru_cache
+from typing import Protocol
 
 import numpy as np
 from scipy import special
 
 from service.stats import tails
 from service.stats.arrays import Matrix, Vector
+from service.stats.moments import Moments
+from service.stats.screen import ScreenStatistic, not_applicable
+
+
+class NullTables(Protocol):
+    """What a screen asks of a table of null laws."""
+
+    def upper(self, name: str, observed: float) -> float:
+        """Return the upper-tail p-value."""
+        ...
+
+    def two_sided(self, name: str, observed: float) -> float:
+        """Return the two-sided p-value."""
+        ...
+
+
+def skewness(moments: Moments, table: NullTables | None) -> ScreenStatistic:
+    """Screen Mardia's skewness ``b1``.
+
+    Parameters
+    ----------
+    moments : Moments
+        Of n > p + 1 units.
+    table : NullTable or None
+        Exact null laws at (n, p); the corrected large-sample law where None.
+
+    Returns
+    -------
+    ScreenStatistic
+        Large values speak against normality.
+    """
+    found = _whitened(moments)
+    if isinstance(found, str):
+        return not_applicable(found)
+    b1 = float(mardia_of_many(found[None])["mardia-skewness"][0])
+    asymptotic = skewness_law(b1, *found.shape)
+    return _result(b1, asymptotic, None if table is None else table.upper("mardia-skewness", b1))
+
+
+def kurtosis(moments: Moments, table: NullTables | None) -> ScreenStatistic:
+    """Screen Mardia's kurtosis ``b2``, two-sided; parameters as `skewness`."""
+    found = _whitened(moments)
+    if isinstance(found, str):
+        return not_applicable(found)
+    b2 = float(mardia_of_many(found[None])["mardia-kurtosis"][0])
+    asymptotic = kurtosis_law(b2, *found.shape)
+    return _result(b2, asymptotic, None if table is None else table.two_sided("mardia-kurtosis", b2))
+
+
+def henze_zirkler(moments: Moments, table: NullTables | None) -> ScreenStatistic:
+    """Screen Henze and Zirkler's distance, which answers to every departure; parameters as `skewness`."""
+    found = _whitened(moments)
+    if isinstance(found, str):
+        return not_applicable(found)
+    statistic = float(henze_zirkler_of_many(found[None])["henze-zirkler"][0])
+    asymptotic = henze_zirkler_law(statistic, *found.shape)
+    return _result(statistic, asymptotic, None if table is None else table.upper("henze-zirkler", statistic))
+
+
+def _whitened(moments: Moments) -> Matrix | str:
+    """Return the whitened units, or why there are none to judge."""
+    n, p = moments.units, moments.dimension
+    if n <= p + 1:
+        # At n = p + 1 these statistics are constants, whatever the data.
+        return f"{n} units of {p} characteristics say nothing about normality; at least {p + 2} are needed"
+    if moments.whitened is None:
+        return str(moments.obstacle)
+    return moments.whitened
+
+
+def _result(statistic: float, asymptotic: float, simulated: float | None) -> ScreenStatistic:
+    if simulated is None:
+        return ScreenStatistic(statistic, asymptotic, "asymptotic", asymptotic_p_value=asymptotic)
+    return ScreenStatistic(statistic, simulated, "monte-carlo", asymptotic_p_value=asymptotic)
 
 
 def mardia_of_many(whitened: Matrix) -> Mapping[str, Vector]:

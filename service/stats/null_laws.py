@@ -76,7 +76,9 @@ class NullTable:
         """Return the table as bytes, with a header and a digest."""
         names = sorted(self.values)
         header = {"n": self.n, "p": self.p, "draws": DRAWS, "scheme": SCHEME, "names": names}
-        body = json.dumps(header).encode() + b"\n" + b"".join(self.values[name].astype("<f8").tobytes() for name in names)
+        body = (
+            json.dumps(header).encode() + b"\n" + b"".join(self.values[name].astype("<f8").tobytes() for name in names)
+        )
         return _MAGIC + hashlib.sha256(body).digest() + body
 
     @classmethod

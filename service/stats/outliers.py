@@ -14,6 +14,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping
+from typing import Protocol
 
 import numpy as np
 from scipy import special
@@ -59,6 +60,52 @@ def against_specification(
     detail = {"squared_distances": squared.tolist(), "limit": limit}
     units = tuple(int(i) for i in np.flatnonzero(squared >= limit))
     return ScreenStatistic(largest, -math.expm1(n * math.log1p(-single)), "exact", units=units, detail=detail)
+
+
+def within_batch(moments: Moments, table: MaximumLaw | None, level: float) -> ScreenStatistic:
+    """Look for units outlying within the batch.
+
+    Parameters
+    ----------
+    moments : Moments
+        Of n > p + 1 units.
+    table : NullTable or None
+        Exact null law of the largest distance at (n, p); Wilks' bound where None.
+    level : float
+        Level for the batch as a whole.
+
+    Returns
+    -------
+    ScreenStatistic
+        The largest ``D2 = (y - ybar)' S^-1 (y - ybar)``, which never exceeds ``(n-1)^2/n``.
+    """
+    n, p = moments.units, moments.dimension
+    if n <= p + 1:
+        return not_applicable(f"{n} units of {p} characteristics all lie equally far out; at least {p + 2} are needed")
+    if moments.whitened is None:
+        return not_applicable(str(moments.obstacle))
+    squared = np.einsum("ij,ij->i", moments.whitened, moments.whitened)
+    largest = float(squared.max())
+    bound = bonferroni_of_maximum(largest, n, p)
+    limit = bonferroni_limit(n, p, level) if table is None else table.critical_value("within-maximum", level)
+    units = tuple(int(i) for i in np.flatnonzero(squared >= limit))
+    detail = {"squared_distances": squared.tolist(), "limit": limit}
+    if table is None:
+        return ScreenStatistic(largest, bound, "asymptotic", units=units, detail=detail)
+    p_value = table.upper("within-maximum", largest)
+    return ScreenStatistic(largest, p_value, "monte-carlo", bound, units, detail)
+
+
+class MaximumLaw(Protocol):
+    """What the screen asks of a table of null laws."""
+
+    def upper(self, name: str, observed: float) -> float:
+        """Return the upper-tail p-value."""
+        ...
+
+    def critical_value(self, name: str, level: float) -> float:
+        """Return the value beyond which the p-value is at most `level`."""
+        ...
 
 
 def maximum_of_many(whitened: Matrix) -> Mapping[str, Vector]:
