@@ -12,7 +12,8 @@ from types import MappingProxyType
 CATALOGUE = MappingProxyType(
     {
         "mean-agrees": "The mean vector agrees with the target: {test}, p = {p}, above the level {level}.",
-        "mean-differs": "The mean vector differs from the target: {test}, p = {p}, at or below the level {level}.{moved}",
+        "mean-differs": "The mean vector differs from the target: {test}, p = {p}, at or below the level {level}."
+        "{moved}",
         "closeness-shown": "The mean vector is shown to lie within the departure that does not matter.",
         "departure-shown": "The mean vector is shown to depart from the target by more than what does not matter.",
         "inconclusive": "Neither closeness nor departure is shown.",

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import re
 import sys
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from http import HTTPStatus
 from typing import Any
 
@@ -49,7 +49,6 @@ def document(operations: Sequence[Operation]) -> dict[str, Any]:
     assert plugin.converter is not None
     plugin.converter.add_attribute_function(_own_field)  # type: ignore[no-untyped-call]
     spec.components.security_scheme("token", {"type": "http", "scheme": "bearer"})
-    spec.components.schema("Problem", schema=ProblemSchema)
     for status in sorted({status for operation in operations for status in operation.problems}):
         spec.components.response(f"Problem{status}", _problem_response(status))
     for operation in operations:
@@ -69,7 +68,8 @@ def to_yaml(described: dict[str, Any]) -> str:
 
 
 def _schema_name(schema: type[Schema]) -> str:
-    return schema.__name__.removesuffix("Schema")
+    # apispec hands over instances too.
+    return str(getattr(schema, "__name__", type(schema).__name__)).removesuffix("Schema")
 
 
 def _described(operation: Operation) -> dict[str, Any]:
@@ -115,7 +115,7 @@ def _response(status: int, shape: Schema | str) -> dict[str, Any]:
 def _problem_response(status: int) -> dict[str, Any]:
     return {
         "description": HTTPStatus(status).phrase,
-        "content": {"application/problem+json": {"schema": "Problem"}},
+        "content": {"application/problem+json": {"schema": ProblemSchema}},
     }
 
 
@@ -157,6 +157,22 @@ _OWN: dict[type[fields.Field[Any]], Callable[[Any], dict[str, Any]]] = {
     own.Instant: lambda _: {"type": "string", "format": "date-time"},
 }
 """From a field to its JSON Schema; the more special kinds first."""
+
+
+def in_words(shape: Mapping[str, Any]) -> str:
+    """Return a JSON Schema in a few words, for a page."""
+    if "$ref" in shape:
+        return str(shape["$ref"]).rsplit("/", 1)[-1]
+    if "oneOf" in shape:
+        return " or ".join(in_words(one) for one in shape["oneOf"])
+    if "anyOf" in shape:
+        return " or ".join(in_words(one) for one in shape["anyOf"])
+    if "enum" in shape:
+        return "one of: " + ", ".join(map(str, shape["enum"]))
+    kind = shape.get("type", "any")
+    if kind == "array":
+        return f"list of {in_words(shape.get('items', {}))}"
+    return " or ".join(kind) if isinstance(kind, list) else str(kind)
 
 
 if __name__ == "__main__":
