@@ -65,7 +65,7 @@ def follow_up(specification: Specification, result: LocationResult) -> dict[str,
         "characteristics": _characteristics(specification, each, closed),
         "multiplicity": "closed testing" if closed else "Holm only: more than 12 characteristics",
         "minimal_sets": [[names[j] for j in members] for members in closed.minimal_sets] if closed else [],
-        "one_at_a_time": _one_at_a_time(specification, result, each),
+        "one_at_a_time": _one_at_a_time(specification, each),
         "ellipses": _ellipses(specification, result),
     }
 
@@ -96,7 +96,7 @@ def _intervals(mean: np.ndarray[Any, Any], half_width: np.ndarray[Any, Any]) -> 
     return intervals
 
 
-def _one_at_a_time(specification: Specification, result: LocationResult, each: FollowUp) -> dict[str, Any]:
+def _one_at_a_time(specification: Specification, each: FollowUp) -> dict[str, Any]:
     """Return what separate tests would have concluded, and how often they would be wrong."""
     alpha, names = specification.significance_level, specification.names
     separate = one_at_a_time(each.p_value, alpha)
@@ -108,9 +108,15 @@ def _one_at_a_time(specification: Specification, result: LocationResult, each: F
         ],
         "family_wise_error_independent": separate.family_wise_error,
         "family_wise_error_bonferroni_independent": separate.family_wise_error_bonferroni,
-        "family_wise_error": family_wise_error(result.covariance, alpha).probability,
-        "family_wise_error_bonferroni": family_wise_error(result.covariance, alpha / len(names)).probability,
+        "family_wise_error": _family_wise_error(specification, alpha),
+        "family_wise_error_bonferroni": _family_wise_error(specification, alpha / len(names)),
     }
+
+
+def _family_wise_error(specification: Specification, level: float) -> float | None:
+    """Return the error under the specification's own correlations; None where it states none."""
+    sigma0 = specification.sigma0
+    return None if sigma0 is None else family_wise_error(sigma0, level).probability
 
 
 def _ellipses(specification: Specification, result: LocationResult) -> list[dict[str, Any]]:

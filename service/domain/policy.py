@@ -27,6 +27,7 @@ from service.domain.reasons import Reason, reason
 from service.domain.screening import Evidence, Finding, screen_all, screen_completeness
 from service.domain.specification import Specification
 from service.domain.verdict import Verdict, answer
+from service.errors import IllConditionedError, NotPositiveDefiniteError, TooFewUnitsError
 from service.stats.location import LocationResult, chi_square_test, hotelling_test, pooled_test, reference_test
 from service.stats.moments import Moments, sample_moments
 from service.stats.null_laws import NullLaws
@@ -101,7 +102,10 @@ def evaluate(batch: Batch, specification: Specification, null_laws: NullLaws, *,
     if batch.missing:
         return _without_values(batch, specification, assumptions)
     moments = sample_moments(rows, specification.target)
-    test = mean_test_of(specification, moments)
+    try:
+        test = mean_test_of(specification, moments)
+    except (TooFewUnitsError, NotPositiveDefiniteError, IllConditionedError) as error:
+        raise error.at("/rows") from error
     screens = screen_all(Evidence(batch, specification, rows, moments, null_laws.get(moments.units, moments.dimension)))
     follow_up = documents.follow_up(specification, test)
     verdict = answer(specification, test, moments.units, follow_up)
