@@ -85,6 +85,18 @@ def test_tails_out_of_all_reach_are_zero_or_one_and_never_raise() -> None:
     assert noncentral.chi_square_upper(1e8, 5, 10.0) == 0.0
     assert noncentral.chi_square_upper(12.0, 5, 1e20) == pytest.approx(1.0, abs=1e-9)
     assert noncentral.f_lower(3.0, 5, 25, 1e12) == 0.0
+    assert noncentral.f_lower(0.0, 5, 25, 1e20) == 0.0
+    assert ShiftedLaw(LAWS[2], 1e20).lower(ShiftedLaw(LAWS[2], 1e20).quantile(0.3)) == pytest.approx(0.3, rel=1e-12)
+
+
+@pytest.mark.parametrize("x", [0.3, 1.0, 2.0])
+def test_law_with_a_fixed_numerator_joins_the_mixture(x: float, monkeypatch: pytest.MonkeyPatch) -> None:
+    noncentrality = 2e12
+    statistic = x * noncentrality / 5
+    mixed = [f(statistic, 5, 25, noncentrality) for f in (noncentral.f_lower, noncentral.f_upper)]
+    monkeypatch.setattr(noncentral, "_FIXED", 1e12)
+    fixed = [f(statistic, 5, 25, noncentrality) for f in (noncentral.f_lower, noncentral.f_upper)]
+    assert fixed == pytest.approx(mixed, rel=2e-10)
 
 
 @pytest.mark.parametrize("law", LAWS)
