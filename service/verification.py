@@ -61,12 +61,12 @@ class Verified:
     not_shown: tuple[str, ...]
 
 
-def verify(bundle: Mapping[str, Any], trusted: TrustedKeys, null_laws: NullLaws) -> Verified:
+def verify(bundle: object, trusted: TrustedKeys, null_laws: NullLaws) -> Verified:
     """Verify a bundle by the steps of this module.
 
     Parameters
     ----------
-    bundle : mapping
+    bundle : object
         A parsed bundle.
     trusted : mapping
         Header segment to public key, from `service.signing.keys.trusted_keys`.
@@ -86,7 +86,7 @@ def verify(bundle: Mapping[str, Any], trusted: TrustedKeys, null_laws: NullLaws)
         Where something is refuted.
     """
     # Step 1
-    if bundle.get("format") != BUNDLE_FORMAT:
+    if not isinstance(bundle, Mapping) or bundle.get("format") != BUNDLE_FORMAT:
         raise UnknownFormatError(f"The file is not a bundle of format {BUNDLE_FORMAT}.")
     # Steps 2 and 3
     decision = _payload(_text(bundle, "decision"), trusted, "decision")

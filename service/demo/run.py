@@ -81,6 +81,8 @@ class Demonstration:
         finally:
             process.send_signal(signal.SIGTERM)
             process.wait(WAIT)
+            assert process.stdout is not None
+            process.stdout.close()
 
 
 def _address(process: subprocess.Popen[str]) -> str:
