@@ -9,7 +9,7 @@ import json
 import os
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -17,6 +17,8 @@ from service import __version__
 from service.errors import ServiceError
 
 if TYPE_CHECKING:
+    from marshmallow import Schema
+
     from service.procedures.site import Site
 
 HOLDS, REFUTED, CANNOT_CHECK = 0, 1, 2
@@ -168,6 +170,74 @@ def _print_verdict(as_json: bool, verdict: dict[str, object]) -> None:
                 click.echo(f"  - {item if isinstance(item, str) else item['pointer'] + ': ' + item['detail']}")
         else:
             click.echo(f"{member.replace('_', ' ')}: {value}")
+
+
+@main.command()
+@click.argument("specification", type=click.Path(exists=True, dir_okay=False, path_type=Path))
+@click.option("--units", type=click.IntRange(1), required=True, help="Units in a batch.")
+@click.option("--shift", type=click.FloatRange(0), help="Shift of the mean in Mahalanobis units.")
+@click.option("--difference", "differences", multiple=True, metavar="NAME=VALUE", help="Shift of one characteristic.")
+@click.option("--power", "wanted", type=click.FloatRange(0, 1, True, True), default=0.9, show_default=True)
+@click.option("--json", "as_json", is_flag=True, help="Print JSON.")
+def plan(
+    specification: Path, *, units: int, shift: float | None, differences: tuple[str, ...], wanted: float, as_json: bool
+) -> None:
+    """Say what a SPECIFICATION, a JSON file, will and will not detect.
+
+    The shift is one number in Mahalanobis units (--shift), or differences in units of measurement (--difference).
+    """
+    from schemas.specification import SpecificationSchema
+    from service.domain.planning import Question
+    from service.domain.planning import plan as plan_of
+    from service.domain.specification import Specification
+    from service.signing.canonical import strict_loads
+
+    if (shift is None) == (not differences):
+        raise click.UsageError("Give --shift, or one or more --difference, and not both.")
+    rule = Specification.from_dict(_loaded(SpecificationSchema(), strict_loads(specification.read_bytes())))
+    moved = shift if shift is not None else dict(_difference(text) for text in differences)
+    document = plan_of(rule, Question(units, moved, wanted))
+    click.echo(json.dumps(document, indent=2) if as_json else _in_lines(document))
+
+
+def _loaded(schema: Schema, document: object) -> dict[str, Any]:
+    """Load a file's document by its schema, or end with every fault and its place."""
+    from marshmallow import ValidationError
+
+    from service.http.problems import refused
+
+    try:
+        loaded: dict[str, Any] = schema.load(document)  # type: ignore[arg-type]
+    except ValidationError as error:
+        raise refused(error) from error
+    return loaded
+
+
+def _difference(text: str) -> tuple[str, float]:
+    name, _, value = text.partition("=")
+    try:
+        return name, float(value)
+    except ValueError as error:
+        raise click.UsageError(f"--difference takes NAME=VALUE; {text!r} has no number.") from error
+
+
+def _in_lines(document: dict[str, Any]) -> str:
+    """Return a plan as lines of words and a small table."""
+    curve = document.pop("operating_characteristic") or []
+    lines = [f"{name.replace('_', ' ')}: {_short(value)}" for name, value in document.items()]
+    lines += ["", "   shift   chance of acceptance"] if curve else []
+    lines += [f"{point['shift']:8.3f}   {point['chance_of_acceptance']:.4f}" for point in curve[::4]]
+    return "\n".join(lines)
+
+
+def _short(value: object) -> str:
+    if isinstance(value, float):
+        return f"{value:.4g}"
+    if isinstance(value, dict):
+        return ", ".join(f"{name.replace('_', ' ')} {_short(inner)}" for name, inner in value.items())
+    if isinstance(value, list):
+        return "; ".join(map(_short, value))
+    return "none" if value is None else str(value)
 
 
 @main.command()

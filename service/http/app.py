@@ -8,13 +8,13 @@ from flask import Flask, Response
 from jinja2 import StrictUndefined
 
 from service.config import Settings
-from service.http import decisions, problems, specifications, system
+from service.http import decisions, plans, problems, specifications, system
 from service.http.openapi import in_words
 from service.http.routing import Operation
 from service.procedures.opening import open_site
 from service.procedures.site import Site
 
-SUBJECTS = (decisions.routes, specifications.routes, system.routes)
+SUBJECTS = (decisions.routes, specifications.routes, plans.routes, system.routes)
 
 OPERATIONS: tuple[Operation, ...] = tuple(operation for routes in SUBJECTS for operation in routes.operations)
 """Every operation of the interface, in the order in which its document lists them."""

@@ -18,6 +18,7 @@ from marshmallow import Schema, fields
 
 from schemas import fields as own
 from schemas.decision import NamedOrWhole
+from schemas.plan import Shift
 from schemas.problem import ProblemSchema
 from schemas.specification import SpecificationReferenceSchema, SpecificationSchema
 from service import __version__
@@ -154,6 +155,9 @@ _OWN: dict[type[fields.Field[Any]], Callable[[Any], dict[str, Any]]] = {
     own.Code: lambda field: {"type": "string", "pattern": f"^{field.PATTERN.pattern}$"},
     own.Text: lambda field: {"type": "string", "minLength": 1, "maxLength": field.longest},
     own.Choice: lambda field: {"type": "string", "enum": list(field.words)},
+    Shift: lambda _: {
+        "oneOf": [{"type": "number", "minimum": 0}, {"type": "object", "additionalProperties": {"type": "number"}}]
+    },
     own.Instant: lambda _: {"type": "string", "format": "date-time"},
 }
 """From a field to its JSON Schema; the more special kinds first."""
