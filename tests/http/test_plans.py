@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 from pathlib import Path
 from typing import Any
@@ -52,7 +53,7 @@ def test_the_curve_begins_at_one_minus_alpha_and_falls(plant: Plant) -> None:
     curve = _plan(plant, plant.specification(), units=12, shift=1.0)["operating_characteristic"]
     chances = [point["chance_of_acceptance"] for point in curve]
     assert chances[0] == pytest.approx(0.99, abs=1e-9)
-    assert all(later < earlier for earlier, later in zip(chances, chances[1:], strict=False))
+    assert all(later < earlier for earlier, later in itertools.pairwise(chances))
 
 
 def test_an_equivalence_plan_has_risk_alpha_at_delta(plant: Plant) -> None:
