@@ -1,7 +1,8 @@
 """Exact null laws by Monte Carlo: one table for each (n, p), made once and the same for ever.
 
 Statistics of whitened units do not change under affine maps, so under
-normality their law depends on (n, p) alone.  Textbook large-sample laws fail
+normality their law depends on (n, p) alone; so does that of a covariance beside
+a known one.  Textbook large-sample laws fail
 at laboratory sizes; up to 200 units p-values come from these tables.
 """
 
@@ -11,13 +12,13 @@ import hashlib
 import json
 import threading
 from collections import OrderedDict
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass
 
 import numpy as np
 
 from service.errors import VerificationError
-from service.stats import normality, outliers
+from service.stats import deletion, dispersion, normality
 from service.stats.arrays import Matrix, Vector
 from service.stats.randomisation import SCHEME, normal_batches
 
@@ -33,9 +34,12 @@ _KEPT = 64
 STATISTICS: tuple[Callable[[Matrix], Mapping[str, Vector]], ...] = (
     normality.mardia_of_many,
     normality.henze_zirkler_of_many,
-    outliers.maximum_of_many,
+    deletion.sequential_maxima,
 )
 """Functions from whitened batches, shape (b, n, p), to statistics by name, each of shape (b,)."""
+
+STATISTICS_OF_DRAWS: tuple[Callable[[Matrix], Mapping[str, Vector]], ...] = (dispersion.statistics_of_many,)
+"""The same of standard normal batches as they are drawn, for statistics beside a known covariance."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -113,11 +117,20 @@ def make_table(n: int, p: int) -> NullTable:
     """Simulate the null laws at (n, p)."""
     parts: dict[str, list[Vector]] = {}
     for batches in normal_batches(f"affine-invariant statistics, n={n}, p={p}", n, p, DRAWS):
+        for name, values in _statistics(batches):
+            parts.setdefault(name, []).append(values)
+    return NullTable(n, p, {name: np.sort(rounded(np.concatenate(chunks))) for name, chunks in parts.items()})
+
+
+def _statistics(batches: Matrix) -> Iterator[tuple[str, Vector]]:
+    """Yield every statistic that exists at this (n, p), by name."""
+    n, p = batches.shape[1:]
+    for statistics in STATISTICS_OF_DRAWS:
+        yield from statistics(batches).items()
+    if n > p + 1:
         whitened = _whitened(batches)
         for statistics in STATISTICS:
-            for name, values in statistics(whitened).items():
-                parts.setdefault(name, []).append(values)
-    return NullTable(n, p, {name: np.sort(rounded(np.concatenate(chunks))) for name, chunks in parts.items()})
+            yield from statistics(whitened).items()
 
 
 def _whitened(batches: Matrix) -> Matrix:
@@ -130,7 +143,7 @@ def _whitened(batches: Matrix) -> Matrix:
 
 def key_of(n: int, p: int) -> str:
     """Return the name under which the table of (n, p) is kept; it changes with the set of statistics."""
-    making = ",".join(function.__name__ for function in STATISTICS)
+    making = ",".join(function.__name__ for function in STATISTICS + STATISTICS_OF_DRAWS)
     return f"{SCHEME}:{DRAWS}:{hashlib.sha256(making.encode()).hexdigest()[:12]}:{n}:{p}"
 
 
@@ -155,8 +168,8 @@ class NullLaws:
         self._lock = threading.Lock()
 
     def get(self, n: int, p: int) -> NullTable | None:
-        """Return the table of (n, p), making it at the first asking; None beyond 200 units or where n <= p + 1."""
-        if n > MOST_UNITS or n <= p + 1:
+        """Return the table of (n, p), making it at the first asking; None beyond 200 units or for one unit."""
+        if n > MOST_UNITS or n < 2:
             return None
         found = self._tables.get((n, p))
         if found is not None:
