@@ -25,6 +25,7 @@ from service.stats.screen import ScreenStatistic
 COARSEST = 0.6
 """Largest reporting step, in reference standard deviations, that is not noted."""
 
+_BY_CHANCE = 1e-3
 _MOST_DECIMALS = 17
 _MOST_EXACT = 2.0**53
 
@@ -56,7 +57,7 @@ def resolution(rows: Matrix, scale: Vector, names: Sequence[str]) -> ScreenStati
         step = reporting_step(rows[:, j])
         if step is not None and step > COARSEST * scale[j]:
             ratio = float(step / scale[j])
-            coarse.append({"characteristic": names[j], "step": step, "standard_deviations": ratio})
+            coarse.append({"characteristic": names[int(j)], "step": step, "standard_deviations": ratio})
     detail = {"coarse_steps": coarse} if coarse else {}
     return ScreenStatistic(float(len(coarse)), None, "none", detail=detail)
 
@@ -72,9 +73,10 @@ def reporting_step(values: Vector) -> float | None:
     Returns
     -------
     float or None
-        The largest number of the form ``m 10^-k``, k the most decimals of any value, of which
-        all values lie whole multiples apart: 0.01 for values to two decimals, 0.5 for halves.
-        None where all values are alike, or have more digits than a double holds.
+        ``10^-k``, k the most decimals of any value: 0.01 for values to two decimals.  Where all values
+        lie whole multiples of ``m 10^-k`` apart, as halves and hundreds do, and that would happen by
+        chance less than once in a thousand times, ``m 10^-k``.  None where all values are alike,
+        or have more digits than a double holds.
     """
     for decimals in range(_MOST_DECIMALS + 1):
         power = 10.0**decimals
@@ -85,5 +87,10 @@ def reporting_step(values: Vector) -> float | None:
         if (whole / power == values).all():
             differences = np.abs(whole - whole[0]).astype(np.int64)
             common = int(np.gcd.reduce(differences))
-            return common / power if common else None
+            return _step(common, values.size) / power if common else None
     return None
+
+
+def _step(common: int, n: int) -> int:
+    """Return `common`, or 1 where n - 1 random differences might all be its multiples."""
+    return common if common ** (1.0 - n) < _BY_CHANCE else 1
