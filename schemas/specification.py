@@ -17,6 +17,9 @@ SCREENS = (
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",
+    "marginal-normality",
+    "dispersion",
+    "order-dependence",
 )
 
 
@@ -93,7 +96,7 @@ class ScreenSchema(Shape):
     """How one screen is applied."""
 
     level = Number(above=0, most=0.5)
-    on_failure = Choice("hold", "note")
+    on_failure = Choice("hold", "note", "sign-flip")
     required = Flag()
 
 

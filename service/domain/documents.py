@@ -46,9 +46,19 @@ def test(specification: Specification, result: LocationResult, verdict: Verdict)
         "mahalanobis_distance": result.mahalanobis_distance,
         "direction": result.direction.tolist(),
     }
+    if verdict.signs is not None:
+        document["sign_flip"] = _sign_flip(verdict)
     if verdict.equivalence is not None:
         document["equivalence"] = _plain(asdict(verdict.equivalence)) | {"units_to_settle": verdict.units_to_settle}
     return document
+
+
+def _sign_flip(verdict: Verdict) -> dict[str, Any]:
+    signs = verdict.signs
+    assert signs is not None
+    if not signs.applicable:
+        return {"p_value": None, "law": "none", "decides": False, "why": signs.why}
+    return {"p_value": signs.p_value, "law": signs.law, "decides": verdict.by_signs, **signs.detail}
 
 
 def _plain(members: dict[str, Any]) -> dict[str, Any]:

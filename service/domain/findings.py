@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from types import MappingProxyType
 
 from service.domain.batch import Batch
@@ -20,6 +20,9 @@ _CODES = MappingProxyType(
         "mardia-skewness": "normality-in-doubt",
         "mardia-kurtosis": "normality-in-doubt",
         "henze-zirkler": "normality-in-doubt",
+        "marginal-normality": "normality-in-doubt",
+        "dispersion": "dispersion-differs",
+        "order-dependence": "order-dependent",
     }
 )
 
@@ -55,10 +58,15 @@ def reasons(holding: Iterable[Finding], screens: tuple[Finding, ...], batch: Bat
 
 def _reason(code: str, group: list[Finding], evidence: str, batch: Batch) -> Reason:
     first = group[0]
-    words = {
+    words: dict[str, Callable[[], dict[str, object]]] = {
         "suspected-data": lambda: {"findings": ", ".join(_found(finding) for finding in group)},
         "outlying-units": lambda: {"units": _units(first, batch), "law": _LAWS[first.name]},
         "normality-in-doubt": lambda: {"screens": ", ".join(_with_p(finding) for finding in group)},
+        "dispersion-differs": lambda: {
+            "direction": first.result.detail.get("direction", "different"),
+            "p": significant(first.result.p_value or 0.0, 2),
+        },
+        "order-dependent": lambda: {"p": significant(first.result.p_value or 0.0, 2)},
         "screen-not-computable": lambda: {"screen": first.name, "why": first.result.why},
     }
     return reason(code, evidence, **words[code]())

@@ -25,6 +25,12 @@ CATALOGUE = MappingProxyType(
         "suspected-data": "The data themselves need a look: {findings}.",
         "outlying-units": "{units} farther out than {law} allows.",
         "normality-in-doubt": "The units do not look like a normal sample: {screens}.",
+        "dispersion-differs": "The spread of the units is not the reference's but {direction}: p = {p}.",
+        "order-dependent": "Units measured one after another resemble each other: p = {p}.",
+        "mean-agrees-by-signs": "Normality is in doubt; the sign-flip test, which needs symmetry only, finds no "
+        "difference: p = {p}, above the level {level}.",
+        "mean-differs-by-signs": "Normality is in doubt; the sign-flip test, which needs symmetry only, finds a "
+        "difference: p = {p}, at or below the level {level}.",
         "screen-not-computable": "The screen {screen}, which the specification requires, cannot be computed: {why}",
     }
 )

@@ -10,7 +10,7 @@ from typing import Any, Literal
 from service.domain.batch import Batch
 from service.domain.completeness import completeness
 from service.domain.specification import SCREEN_NAMES, ScreenRule, Specification
-from service.stats import normality, outliers
+from service.stats import dispersion, normality, ordering, outliers, shapiro_wilk
 from service.stats.arrays import Matrix
 from service.stats.moments import Moments
 from service.stats.null_laws import NullTable
@@ -71,12 +71,12 @@ class Finding:
             return "not-met" if self.result.statistic else "met"
         return "not-met" if self.result.p_value <= self.rule.level else "met"
 
-    @property
-    def holds(self) -> bool:
-        """Whether this finding keeps the lot from being decided."""
+    def holds(self, *, signs_decide: bool) -> bool:
+        """Return whether this finding keeps the lot from being decided, where sign flips can decide or not."""
         if self.state == "not-applicable":
             return self.rule.required
-        return self.state == "not-met" and self.rule.on_failure == "hold"
+        deferred = self.rule.on_failure == "sign-flip" and signs_decide
+        return self.state == "not-met" and self.rule.on_failure != "note" and not deferred
 
     def to_dict(self) -> dict[str, Any]:
         """Return the member of a record's ``screens``."""
@@ -140,6 +140,21 @@ def _henze_zirkler(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
     return normality.henze_zirkler(evidence.moments, evidence.table)
 
 
+def _margins(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return shapiro_wilk.margins(evidence.moments)
+
+
+def _dispersion(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    sigma0 = evidence.specification.sigma0
+    if sigma0 is None:
+        return not_applicable("the specification has no reference covariance")
+    return dispersion.against_reference(evidence.moments, sigma0, evidence.table, rule.level)
+
+
+def _order(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return ordering.order_dependence(evidence.moments, evidence.batch.sequence, evidence.table)
+
+
 _SCREENS: Mapping[str, Callable[[Evidence, ScreenRule], ScreenStatistic]] = MappingProxyType(
     {
         "completeness": _completeness,
@@ -148,5 +163,8 @@ _SCREENS: Mapping[str, Callable[[Evidence, ScreenRule], ScreenStatistic]] = Mapp
         "mardia-skewness": _skewness,
         "mardia-kurtosis": _kurtosis,
         "henze-zirkler": _henze_zirkler,
+        "marginal-normality": _margins,
+        "dispersion": _dispersion,
+        "order-dependence": _order,
     }
 )

@@ -17,7 +17,7 @@ from service.stats.arrays import Matrix, Vector, frozen
 from service.stats.covariance import Covariance, factor_covariance
 
 CovarianceKind = Literal["known", "reference", "batch", "pooled"]
-OnFailure = Literal["hold", "note"]
+OnFailure = Literal["hold", "note", "sign-flip"]
 
 SCREEN_NAMES = (
     "completeness",
@@ -26,9 +26,17 @@ SCREEN_NAMES = (
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",
+    "marginal-normality",
+    "dispersion",
+    "order-dependence",
 )
 """Every screen, in the order in which records list them."""
 
+JOINT_NORMALITY = frozenset({"mardia-skewness", "mardia-kurtosis", "henze-zirkler"})
+"""Screens whose failure a sign-flip test can answer."""
+
+# It explains what the joint screens find, and holds a lot only where the specification says so.
+_NOTED_BY_DEFAULT = frozenset({"marginal-normality"})
 _SYMMETRY = 1e-12
 
 
@@ -40,7 +48,7 @@ class ScreenRule:
     ----------
     level : float
         Significance level of the screen.
-    on_failure : {"hold", "note"}
+    on_failure : {"hold", "note", "sign-flip"}
         What a screen that is not met does.
     required : bool
         Whether a screen that cannot be computed holds the lot.
@@ -192,10 +200,11 @@ def _screen_rules(data: Mapping[str, Mapping[str, Any]]) -> Mapping[str, ScreenR
     rules = {}
     for name in SCREEN_NAMES:
         given = data.get(name)
+        usual: OnFailure = "note" if name in _NOTED_BY_DEFAULT else "hold"
         settings = given or {}
         rules[name] = ScreenRule(
             level=settings.get("level", 0.01),
-            on_failure=settings.get("on_failure", "hold"),
+            on_failure=settings.get("on_failure", usual),
             required=settings.get("required", False),
             listed=given is not None,
         )
@@ -248,7 +257,16 @@ def _faults(data: Mapping[str, Any]) -> list[Fault]:
         elif not low <= item["target"] <= high:
             text = f"The target {item['target']:g} of {item['name']} lies outside its own bounds."
             faults.append(Fault(f"/characteristics/{j}/target", text, "target-out-of-bounds"))
-    return faults + _question_faults(data)
+    return faults + _question_faults(data) + _sign_flip_faults(data)
+
+
+def _sign_flip_faults(data: Mapping[str, Any]) -> list[Fault]:
+    text = "Sign flips answer doubts about joint normality only; give hold or note."
+    return [
+        Fault(f"/screens/{name}/on_failure", text, "sign-flip-not-here")
+        for name, settings in (data.get("screens") or {}).items()
+        if settings.get("on_failure") == "sign-flip" and name not in JOINT_NORMALITY
+    ]
 
 
 def _question_faults(data: Mapping[str, Any]) -> list[Fault]:

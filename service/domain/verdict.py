@@ -3,15 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Literal
 
 from service.domain.reasons import Reason, reason, significant
-from service.domain.specification import Specification
+from service.domain.specification import JOINT_NORMALITY, Specification
 from service.stats.equivalence import BoxResult, Conclusion, EllipsoidResult, box_equivalence, ellipsoid_equivalence
 from service.stats.equivalence_power import units_to_settle
 from service.stats.location import LocationResult
 from service.stats.power import Plan, power
+from service.stats.screen import ScreenStatistic
 
 Outcome = Literal["accepted", "rejected", "held"]
 
@@ -32,6 +33,10 @@ class Verdict:
         Inconclusive: how many more units would be likely to settle it.
     power_at_required_shift : float or None
         Where the specification requires a power.
+    signs : ScreenStatistic or None
+        The sign-flip check, where normality is in doubt.
+    by_signs : bool
+        Whether sign flips can stand in for the law that normality would give.
     """
 
     outcome: Outcome
@@ -39,9 +44,17 @@ class Verdict:
     equivalence: EllipsoidResult | BoxResult | None = None
     units_to_settle: int | None = None
     power_at_required_shift: float | None = None
+    signs: ScreenStatistic | None = None
+    by_signs: bool = False
 
 
-def answer(specification: Specification, test: LocationResult, n: int, follow_up: Mapping[str, Any]) -> Verdict:
+def answer(
+    specification: Specification,
+    test: LocationResult,
+    n: int,
+    follow_up: Mapping[str, Any],
+    signs: ScreenStatistic | None = None,
+) -> Verdict:
     """Answer the specification's question.
 
     Parameters
@@ -54,32 +67,56 @@ def answer(specification: Specification, test: LocationResult, n: int, follow_up
         Units in the batch.
     follow_up : mapping
         What moved, as the record states it.
+    signs : ScreenStatistic, optional
+        The sign-flip check, where normality is in doubt.
     """
     if specification.question.form == "equivalence":
-        return _equivalence(specification, test, n)
-    return _difference(specification, test, follow_up)
+        return replace(_equivalence(specification, test, n), signs=signs)
+    decides = signs is not None and signs.applicable and _deferred(specification)
+    verdict = _by_signs(specification, signs) if decides and signs else _difference(specification, test, follow_up)
+    return _with_power(replace(verdict, signs=signs, by_signs=decides), specification, test)
+
+
+def _deferred(specification: Specification) -> bool:
+    """Whether some screen of joint normality leaves the decision to sign flips."""
+    return any(specification.screens[name].on_failure == "sign-flip" for name in JOINT_NORMALITY)
 
 
 def _difference(specification: Specification, test: LocationResult, follow_up: Mapping[str, Any]) -> Verdict:
-    alpha, question = specification.significance_level, specification.question
+    alpha = specification.significance_level
     words = {"test": in_words(test), "p": in_words_p(test), "level": significant(alpha)}
-    reached = None
-    if question.required_shift is not None and question.required_power is not None:
-        reached = power(test.law, alpha, test.effective_units * question.required_shift**2)
     if test.p_value <= alpha:
-        why = reason("mean-differs", "/test", moved=moved(follow_up), **words)
-        return Verdict("rejected", (why,), power_at_required_shift=reached)
-    agrees = reason("mean-agrees", "/test", **words)
-    if reached is not None and question.required_power is not None and reached < question.required_power:
-        why = reason(
-            "too-few-units-for-power",
-            "/power",
-            shift=significant(question.required_shift or 0.0),
-            power=significant(reached),
-            wanted=significant(question.required_power),
-        )
-        return Verdict("held", (why, agrees), power_at_required_shift=reached)
-    return Verdict("accepted", (agrees,), power_at_required_shift=reached)
+        return Verdict("rejected", (reason("mean-differs", "/test", moved=moved(follow_up), **words),))
+    return Verdict("accepted", (reason("mean-agrees", "/test", **words),))
+
+
+def _by_signs(specification: Specification, signs: ScreenStatistic) -> Verdict:
+    alpha, p = specification.significance_level, signs.p_value
+    assert p is not None
+    words = {"p": significant(p), "level": significant(alpha)}
+    if p <= alpha:
+        return Verdict("rejected", (reason("mean-differs-by-signs", "/test/sign_flip", **words),))
+    return Verdict("accepted", (reason("mean-agrees-by-signs", "/test/sign_flip", **words),))
+
+
+def _with_power(verdict: Verdict, specification: Specification, test: LocationResult) -> Verdict:
+    """Hold an acceptance that had less than the power required, where one is."""
+    question = specification.question
+    if question.required_shift is None or question.required_power is None:
+        return verdict
+    noncentrality = test.effective_units * question.required_shift**2
+    reached = power(test.law, specification.significance_level, noncentrality)
+    verdict = replace(verdict, power_at_required_shift=reached)
+    if verdict.outcome != "accepted" or reached >= question.required_power:
+        return verdict
+    why = reason(
+        "too-few-units-for-power",
+        "/power",
+        shift=significant(question.required_shift),
+        power=significant(reached),
+        wanted=significant(question.required_power),
+    )
+    return replace(verdict, outcome="held", reasons=(why, *verdict.reasons))
 
 
 def _equivalence(specification: Specification, test: LocationResult, n: int) -> Verdict:

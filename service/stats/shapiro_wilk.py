@@ -115,6 +115,7 @@ def weights(n: int) -> Vector:
     if n == 3:
         return frozen([-math.sqrt(0.5), 0.0, math.sqrt(0.5)])
     scores = special.ndtri((np.arange(1, n + 1) - 0.375) / (n + 0.25))
+    scores = (scores - scores[::-1]) / 2
     square = float(scores @ scores)
     fitted = (_OUTERMOST, _SECOND) if n > 5 else (_OUTERMOST,)
     outer = len(fitted)
