@@ -200,7 +200,7 @@ def cautions(
         stated.append("covariance close to singular")
     if batch.runs:
         stated.append("runs are not taken into account")
-    if any(finding.state == "not-applicable" for finding in screens):
+    if any(finding.state == "not-applicable" and finding.expected for finding in screens):
         stated.append("some screens could not be made")
     if specification.question.form == "difference" and result.p_value > specification.significance_level:
         stated.append("no difference found is not conformity shown")
