@@ -37,7 +37,7 @@ def settings_for(workers: int) -> dict[str, Any]:
     }
 
 
-class Server(BaseApplication):
+class Server(BaseApplication):  # type: ignore[misc]
     """The service under gunicorn; each worker opens store and key for itself, after the fork."""
 
     def __init__(self, options: Mapping[str, Any]) -> None:

@@ -135,7 +135,7 @@ def skewness_of(whitened: Matrix) -> float:
         for rows in _stripes(n):
             gram = whitened[rows] @ whitened.T
             total += float(np.vdot(gram * gram, gram))
-    return float(total * n / (n - 1) ** 3)
+    return float(total * n / (n - 1.0) ** 3)
 
 
 def kurtosis_of(whitened: Matrix) -> float:
@@ -147,7 +147,7 @@ def kurtosis_of(whitened: Matrix) -> float:
     """
     n = whitened.shape[0]
     squared = np.einsum("ij,ij->i", whitened, whitened)
-    return float(squared @ squared * n / (n - 1) ** 2)
+    return float(squared @ squared * n / (n - 1.0) ** 2)
 
 
 def henze_zirkler_of(whitened: Matrix) -> float:

@@ -1,7 +1,8 @@
 """Exact null laws by Monte Carlo: one table for each (n, p), made once and the same for ever.
 
 Statistics of whitened units do not change under affine maps, so under
-normality their law depends on (n, p) alone.  Textbook large-sample laws fail
+normality their law depends on (n, p) alone; so does that of a covariance beside
+a known one.  Textbook large-sample laws fail
 at laboratory sizes; up to 200 units p-values come from these tables.
 
 References
@@ -25,7 +26,7 @@ import numpy as np
 import numpy.typing as npt
 
 from service.errors import VerificationError
-from service.stats import normality, ordering, outliers
+from service.stats import deletion, dispersion, normality, ordering
 from service.stats.arrays import Matrix, Vector
 from service.stats.randomisation import SCHEME, normal_batches
 
@@ -38,12 +39,15 @@ MOST_UNITS = 200
 STATISTICS: tuple[Callable[[Matrix], Mapping[str, Vector]], ...] = (
     normality.mardia_of_many,
     normality.henze_zirkler_of_many,
-    outliers.maximum_of_many,
+    deletion.sequential_maxima,
     ordering.of_many,
 )
 """Functions from whitened batches, shape (b, n, p), to statistics by name, each of shape (b,)."""
 
-EDITION = "2"
+STATISTICS_OF_DRAWS: tuple[Callable[[Matrix], Mapping[str, Vector]], ...] = (dispersion.statistics_of_many,)
+"""The same of standard normal batches as they are drawn, for statistics beside a known covariance."""
+
+EDITION = "1"
 """Edition of the statistics and their rounding; a change of any definition changes it, and so every key."""
 
 _MAGIC = b"acceptance null table\n"
@@ -151,7 +155,7 @@ def make_table(n: int, p: int) -> NullTable:
     Parameters
     ----------
     n, p : int
-        Units and characteristics, n > p + 1.
+        Units, at least 2, and characteristics.
 
     Returns
     -------
@@ -160,10 +164,8 @@ def make_table(n: int, p: int) -> NullTable:
     """
     parts: dict[str, list[Vector]] = {}
     for batches in _steps(n, p):
-        whitened = _whitened(batches)
-        for statistics in STATISTICS:
-            for name, values in statistics(whitened).items():
-                parts.setdefault(name, []).append(values)
+        for name, values in _statistics(batches):
+            parts.setdefault(name, []).append(values)
     return NullTable(n, p, {name: np.sort(rounded(np.concatenate(steps))) for name, steps in parts.items()})
 
 
@@ -172,6 +174,17 @@ def _steps(n: int, p: int) -> Iterator[Matrix]:
     for batches in normal_batches(f"affine-invariant statistics, n={n}, p={p}", n, p, DRAWS):
         for start in range(0, batches.shape[0], size):
             yield batches[start : start + size]
+
+
+def _statistics(batches: Matrix) -> Iterator[tuple[str, Vector]]:
+    """Yield every statistic that exists at this (n, p), by name."""
+    n, p = batches.shape[1:]
+    for statistics in STATISTICS_OF_DRAWS:
+        yield from statistics(batches).items()
+    if n > p + 1:
+        whitened = _whitened(batches)
+        for statistics in STATISTICS:
+            yield from statistics(whitened).items()
 
 
 def _whitened(batches: Matrix) -> Matrix:
@@ -184,7 +197,8 @@ def _whitened(batches: Matrix) -> Matrix:
 
 def key_of(n: int, p: int) -> str:
     """Return the name under which the table of (n, p) is kept; it changes with the set of statistics."""
-    making = ",".join(f"{function.__module__}.{function.__name__}" for function in STATISTICS)
+    functions = STATISTICS + STATISTICS_OF_DRAWS
+    making = ",".join(f"{function.__module__}.{function.__name__}" for function in functions)
     return f"{SCHEME}:{EDITION}:{DRAWS}:{hashlib.sha256(making.encode()).hexdigest()[:12]}:{n}:{p}"
 
 
@@ -212,14 +226,14 @@ class NullLaws:
         self._lock = threading.Lock()
 
     def get(self, n: int, p: int) -> NullTable | None:
-        """Return the table of (n, p), making it at the first asking; None beyond 200 units or where n <= p + 1.
+        """Return the table of (n, p), making it at the first asking; None beyond 200 units or for one unit.
 
         Raises
         ------
         VerificationError
             Where the store's copy is damaged or foreign.
         """
-        if n > MOST_UNITS or n <= p + 1:
+        if n > MOST_UNITS or n < 2:
             return None
         found = self._recall(n, p)
         if found is not None:
