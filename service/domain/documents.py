@@ -49,7 +49,11 @@ def test(specification: Specification, result: LocationResult, verdict: Verdict)
     if verdict.signs is not None:
         document["sign_flip"] = _sign_flip(verdict)
     if verdict.equivalence is not None:
-        document["equivalence"] = _plain(asdict(verdict.equivalence)) | {"units_to_settle": verdict.units_to_settle}
+        document["equivalence"] = {
+            **_plain(asdict(verdict.equivalence)),
+            "conclusion": str(verdict.equivalence.conclusion),
+            "units_to_settle": verdict.units_to_settle,
+        }
     return document
 
 
