@@ -4,11 +4,7 @@ from __future__ import annotations
 
 import os
 import signal
-import subprocess
-import sys
 import threading
-from collections.abc import Iterator
-from contextlib import contextmanager
 from pathlib import Path
 
 import pytest
@@ -17,6 +13,7 @@ import requests
 from service.domain.actor import Actor
 from service.procedures import read
 from service.procedures.opening import open_site
+from tests.live import serving
 from tests.plant import open_plant, request_for, settings_in
 
 
@@ -26,31 +23,6 @@ def folder(tmp_path: Path) -> Path:
     opened.site.store.close()
     (tmp_path / "token").write_text(opened.tokens["pipeline"], encoding="ascii")
     return tmp_path
-
-
-@contextmanager
-def serving(folder: Path) -> Iterator[tuple[str, int]]:
-    """Run the real service in a group of its own; yield its address and the group, which is killed at the end."""
-    process = subprocess.Popen(
-        [sys.executable, "-m", "service", "serve", "--port", "0", "--workers", "2"],
-        env={**os.environ, "ACCEPTANCE_DATA": str(folder)},
-        stdout=subprocess.PIPE,
-        text=True,
-        start_new_session=True,
-    )
-    assert process.stdout is not None
-    try:
-        address = process.stdout.readline().rsplit(" ", 1)[1].strip()
-        with requests.Session() as session:
-            retry = requests.adapters.Retry(total=40, connect=40, backoff_factor=0.1, backoff_max=0.5)
-            session.mount("http://", requests.adapters.HTTPAdapter(max_retries=retry))
-            assert session.get(f"{address}/readyz", timeout=20).ok
-        yield address, process.pid
-    finally:
-        if process.poll() is None:
-            os.killpg(process.pid, signal.SIGKILL)
-        process.wait(20)
-        process.stdout.close()
 
 
 def test_no_answered_decision_is_lost_when_every_process_is_killed(folder: Path) -> None:
@@ -70,7 +42,7 @@ def test_no_answered_decision_is_lost_when_every_process_is_killed(folder: Path)
                 if len(answered) >= 40:
                     enough.set()
 
-    with serving(folder) as (address, group):
+    with serving(folder, workers=2) as (address, group):
         threads = [threading.Thread(target=post, args=(address,)) for _ in range(4)]
         for thread in threads:
             thread.start()

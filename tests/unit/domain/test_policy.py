@@ -226,7 +226,7 @@ def test_any_number_of_units_gives_an_answer_or_a_refusal_by_name(kind: str, n: 
     if kind in ("reference", "pooled"):
         covariance["degrees_of_freedom"] = 20
     if kind == "batch" and n <= 5:
-        with pytest.raises(TooFewUnitsError, match="at least 6 units|One unit"):
+        with pytest.raises(TooFewUnitsError, match=r"at least 6 units|One unit"):
             judged(sample("edges", n), covariance=covariance)
         return
     assert _all_finite(judged(sample("edges", n), covariance=covariance).to_dict())
