@@ -145,10 +145,14 @@ class Store:
         """
         with _unavailable("opened"):
             store = cls(engine.writing_engine(url), engine.reading_engine(url))
-            engine.check_durability(store._writer)
-            with store._writer.connect() as connection:
-                schema.check(connection)
-            engine.sync_folder(url)
+            try:
+                engine.check_durability(store._writer)
+                with store._writer.connect() as connection:
+                    schema.check(connection)
+                engine.sync_folder(url)
+            except BaseException:
+                store.close()
+                raise
         return store
 
     @staticmethod
