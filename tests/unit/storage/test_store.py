@@ -77,9 +77,13 @@ def test_what_is_added_reads_back(store: Store) -> None:
 
 
 def test_an_error_undoes_the_whole_transaction(store: Store) -> None:
-    with pytest.raises(ZeroDivisionError), store.transaction() as tx:
-        tx.add_record("envelope", columns("1"))
-        raise ZeroDivisionError
+    def fail_halfway() -> None:
+        with store.transaction() as tx:
+            tx.add_record("envelope", columns("1"))
+            raise ZeroDivisionError
+
+    with pytest.raises(ZeroDivisionError):
+        fail_halfway()
     with store.reading() as view:
         assert not view.has_records()
 
