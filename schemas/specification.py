@@ -12,8 +12,10 @@ from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, 
 
 SCREENS = (
     "completeness",
+    "resolution",
     "outlying-against-specification",
     "outlying-within-batch",
+    "outlying-robust",
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",

@@ -49,7 +49,11 @@ def test(specification: Specification, result: LocationResult, verdict: Verdict)
     if verdict.signs is not None:
         document["sign_flip"] = _sign_flip(verdict)
     if verdict.equivalence is not None:
-        document["equivalence"] = _plain(asdict(verdict.equivalence)) | {"units_to_settle": verdict.units_to_settle}
+        document["equivalence"] = {
+            **_plain(asdict(verdict.equivalence)),
+            "conclusion": str(verdict.equivalence.conclusion),
+            "units_to_settle": verdict.units_to_settle,
+        }
     return document
 
 
@@ -200,7 +204,7 @@ def cautions(
         stated.append("covariance close to singular")
     if batch.runs:
         stated.append("runs are not taken into account")
-    if any(finding.state == "not-applicable" for finding in screens):
+    if any(finding.state == "not-applicable" and finding.expected for finding in screens):
         stated.append("some screens could not be made")
     if specification.question.form == "difference" and result.p_value > specification.significance_level:
         stated.append("no difference found is not conformity shown")

@@ -15,8 +15,10 @@ OF_UNITS = frozenset({"outlying-against-specification"})
 _CODES = MappingProxyType(
     {
         "completeness": "suspected-data",
+        "resolution": "suspected-data",
         "outlying-against-specification": "outlying-units",
         "outlying-within-batch": "outlying-units",
+        "outlying-robust": "outlying-units",
         "mardia-skewness": "normality-in-doubt",
         "mardia-kurtosis": "normality-in-doubt",
         "henze-zirkler": "normality-in-doubt",

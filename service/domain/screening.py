@@ -9,11 +9,12 @@ from typing import Any, Literal
 
 from service.domain.batch import Batch
 from service.domain.completeness import completeness
-from service.domain.specification import SCREEN_NAMES, ScreenRule, Specification
-from service.stats import dispersion, normality, ordering, outliers, shapiro_wilk
-from service.stats.arrays import Matrix
+from service.domain.specification import MADE_WHEN_ASKED, SCREEN_NAMES, ScreenRule, Specification
+from service.stats import dispersion, normality, ordering, outliers, resolution, robust, shapiro_wilk
+from service.stats.arrays import Matrix, Vector
 from service.stats.moments import Moments
 from service.stats.null_laws import NullTable
+from service.stats.robust_table import robust_table
 from service.stats.screen import ScreenStatistic, not_applicable
 
 State = Literal["met", "not-met", "not-applicable"]
@@ -43,6 +44,12 @@ class Evidence:
     moments: Moments
     table: NullTable | None
 
+    @property
+    def scale(self) -> Vector | None:
+        """Standard deviations of a unit: the reference's, else the batch's own."""
+        covariance = self.specification.sigma0 or self.moments.covariance
+        return None if covariance is None else covariance.scale
+
 
 @dataclass(frozen=True, slots=True)
 class Finding:
@@ -70,6 +77,11 @@ class Finding:
         if self.result.p_value is None:
             return "not-met" if self.result.statistic else "met"
         return "not-met" if self.result.p_value <= self.rule.level else "met"
+
+    @property
+    def expected(self) -> bool:
+        """Whether the specification counts on the screen: all, but those that are made only when asked for."""
+        return self.rule.listed or self.name not in MADE_WHEN_ASKED
 
     def holds(self, *, signs_decide: bool) -> bool:
         """Return whether this finding keeps the lot from being decided, where sign flips can decide or not."""
@@ -128,6 +140,20 @@ def _within_batch(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
     return outliers.within_batch(evidence.moments, evidence.table, rule.level)
 
 
+def _resolution(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    scale = evidence.scale
+    if scale is None:
+        return not_applicable("there is no standard deviation to compare reporting steps with")
+    return resolution.resolution(evidence.rows, scale, evidence.specification.names)
+
+
+def _robust(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    if not rule.listed:
+        return not_applicable("the specification does not ask for it")
+    table = robust_table(evidence.moments.units, evidence.moments.dimension)
+    return robust.outlying(evidence.moments, table, rule.level)
+
+
 def _skewness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
     return normality.skewness(evidence.moments, evidence.table)
 
@@ -158,8 +184,10 @@ def _order(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
 _SCREENS: Mapping[str, Callable[[Evidence, ScreenRule], ScreenStatistic]] = MappingProxyType(
     {
         "completeness": _completeness,
+        "resolution": _resolution,
         "outlying-against-specification": _against_specification,
         "outlying-within-batch": _within_batch,
+        "outlying-robust": _robust,
         "mardia-skewness": _skewness,
         "mardia-kurtosis": _kurtosis,
         "henze-zirkler": _henze_zirkler,

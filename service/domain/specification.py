@@ -21,8 +21,10 @@ OnFailure = Literal["hold", "note", "sign-flip"]
 
 SCREEN_NAMES = (
     "completeness",
+    "resolution",
     "outlying-against-specification",
     "outlying-within-batch",
+    "outlying-robust",
     "mardia-skewness",
     "mardia-kurtosis",
     "henze-zirkler",
@@ -35,8 +37,11 @@ SCREEN_NAMES = (
 JOINT_NORMALITY = frozenset({"mardia-skewness", "mardia-kurtosis", "henze-zirkler"})
 """Screens whose failure a sign-flip test can answer."""
 
-# It explains what the joint screens find, and holds a lot only where the specification says so.
-_NOTED_BY_DEFAULT = frozenset({"marginal-normality"})
+MADE_WHEN_ASKED = frozenset({"outlying-robust"})
+"""Screens that cost more than all the others together, made only where the specification names them."""
+
+# These explain, and hold a lot only where the specification says so.
+_NOTED_BY_DEFAULT = frozenset({"marginal-normality", "resolution"})
 _SYMMETRY = 1e-12
 
 

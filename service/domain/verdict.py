@@ -72,14 +72,16 @@ def answer(
     """
     if specification.question.form == "equivalence":
         return replace(_equivalence(specification, test, n), signs=signs)
-    decides = signs is not None and signs.applicable and _deferred(specification)
+    decides = signs is not None and _can_decide(specification, signs)
     verdict = _by_signs(specification, signs) if decides and signs else _difference(specification, test, follow_up)
     return _with_power(replace(verdict, signs=signs, by_signs=decides), specification, test)
 
 
-def _deferred(specification: Specification) -> bool:
-    """Whether some screen of joint normality leaves the decision to sign flips."""
-    return any(specification.screens[name].on_failure == "sign-flip" for name in JOINT_NORMALITY)
+def _can_decide(specification: Specification, signs: ScreenStatistic) -> bool:
+    """Whether sign flips may decide: the specification says so, and so many units let them reject at all."""
+    deferred = any(specification.screens[name].on_failure == "sign-flip" for name in JOINT_NORMALITY)
+    smallest = signs.detail.get("smallest_p_value")
+    return deferred and isinstance(smallest, float) and smallest <= specification.significance_level
 
 
 def _difference(specification: Specification, test: LocationResult, follow_up: Mapping[str, Any]) -> Verdict:

@@ -5,6 +5,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 import sys
 from collections.abc import Callable, Mapping, Sequence
@@ -177,6 +178,15 @@ def in_words(shape: Mapping[str, Any]) -> str:
     if kind == "array":
         return f"list of {in_words(shape.get('items', {}))}"
     return " or ".join(kind) if isinstance(kind, list) else str(kind)
+
+
+_LIST_OF_SCALARS = re.compile(r"\[\s+([^\[\]{}]*?)\s+\]")
+
+
+def in_lines(example: object) -> str:
+    """Return an example as JSON for a page: members as written, each list of plain values on one line."""
+    text = json.dumps(example, indent=2, ensure_ascii=False)
+    return _LIST_OF_SCALARS.sub(lambda found: "[" + " ".join(found[1].split()) + "]", text)
 
 
 if __name__ == "__main__":

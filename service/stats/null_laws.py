@@ -2,8 +2,8 @@
 
 Statistics of whitened units do not change under affine maps, so under
 normality their law depends on (n, p) alone; so does that of a covariance beside
-a known one.  Textbook large-sample laws fail
-at laboratory sizes; up to 200 units p-values come from these tables.
+a known one.  Textbook large-sample laws fail at laboratory sizes; up to 200
+units p-values come from these tables.
 
 References
 ----------

@@ -72,7 +72,7 @@ def _set(path: str, value: object) -> Callable[[dict[str, Any]], None]:
         ("test/p_value", 0.9),
         ("test/statistic", 1.0),
         ("mean/0", 601.0),
-        ("screens/1/units", []),
+        ("screens/2/units", []),
         ("screens/3/p_value", 0.5),
         ("follow_up/characteristics/2/closed_p_value", 0.001),
         ("reasons/0/text", "All is well."),
