@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy import stats
+from scipy import optimize, stats
 from statsmodels.stats import multivariate
 
 from service.stats import dispersion
@@ -29,15 +29,6 @@ def test_likelihood_ratio_agrees_with_statsmodels() -> None:
     assert found.law == "asymptotic"
 
 
-def test_box_m_agrees_with_statsmodels() -> None:
-    one, other = batches.clean(14, 3, 1), batches.clean(30, 3, 2)
-    covariances = [np.cov(one.T), np.cov(other.T)]
-    found = _against(one, covariances[1], 29.0)
-    second = multivariate.test_cov_oneway(covariances, [14, 30])
-    assert found.p_value == pytest.approx(second.pvalue_f, rel=1e-9)
-    assert found.statistic * (1 - _first_correction(3, 13, 29)) == pytest.approx(second.statistic_chi2, rel=1e-10)
-
-
 def _first_correction(p: int, f1: float, f2: float) -> float:
     return (1 / f1 + 1 / f2 - 1 / (f1 + f2)) * (2 * p * p + 3 * p - 1) / (6 * (p + 1))
 
@@ -48,13 +39,26 @@ def test_box_m_becomes_the_likelihood_ratio_as_the_reference_becomes_known() -> 
     assert dispersion.box_m(values, 14.0, 1e10) == pytest.approx(ratio, rel=1e-7)
 
 
-@pytest.mark.parametrize(("p", "f1", "f2"), [(1, 9.0, 12.0), (2, 6.0, 40.0), (6, 8.0, 9.0)])
-def test_both_branches_of_the_f_approximation_agree_with_statsmodels_or_its_own_series(
-    p: int, f1: float, f2: float
-) -> None:
-    m, c1 = 1.4 * p * (p + 1) / 2, _first_correction(p, f1, f2)
-    chi_square = stats.chi2.sf(m * (1 - c1), p * (p + 1) / 2)
-    assert dispersion.box_tail(m, p, f1, f2) == pytest.approx(chi_square, abs=0.06)
+@pytest.mark.parametrize(("p", "n1", "n2"), [(2, 7, 41), (3, 14, 30), (6, 9, 10)])
+def test_box_m_agrees_with_statsmodels(p: int, n1: int, n2: int) -> None:
+    one, other = batches.clean(n1, p, 1), batches.clean(n2, p, 2)
+    covariances = [np.cov(one.T).reshape(p, p), np.cov(other.T).reshape(p, p)]
+    found = _against(one, covariances[1], n2 - 1.0)
+    second = multivariate.test_cov_oneway(covariances, [n1, n2])
+    assert found.p_value == pytest.approx(second.pvalue_f, rel=1e-9)
+    chi_square = found.statistic * (1 - _first_correction(p, n1 - 1, n2 - 1))
+    assert chi_square == pytest.approx(second.statistic_chi2, rel=1e-9)
+
+
+@pytest.mark.parametrize("m", [1.0, 4.0, 8.0])
+def test_box_m_of_two_variances_is_near_its_exact_law_by_their_ratio(m: float) -> None:
+    # The branch of the F law for p = 1; statsmodels has the sign of its last term reversed.
+    ends = [
+        optimize.brentq(lambda ratio: dispersion.box_m(np.array([ratio]), 29.0, 8.0) - m, *bracket)
+        for bracket in ((1e-12, 1.0), (1.0, 1e9))
+    ]
+    exact = stats.f.cdf(ends[0], 29, 8) + stats.f.sf(ends[1], 29, 8)
+    assert dispersion.box_tail(m, 1, 29.0, 8.0) == pytest.approx(exact, rel=2e-3)
 
 
 def test_box_tail_is_zero_beyond_the_end_of_its_law() -> None:
