@@ -38,6 +38,7 @@ SEQUENTIAL = "within-sequential"
 """Name of the null law of the strongest evidence over all stages."""
 
 _SMALLEST_P = 1e-300
+_MOST_STAGES = 21
 # A Schur complement loses as many digits as its pivot has leading zeros; below
 # this the remaining units are whitened afresh.
 _SMALLEST_PIVOT = 1e-6
@@ -83,8 +84,8 @@ class Stages:
 
 
 def most_deleted(n: int, p: int) -> int:
-    """Return the number of stages: ``floor(n/10) + 1``, each with at least p + 2 units left to measure."""
-    return max(0, min(n // 10 + 1, n - p - 1))
+    """Return the number of stages: ``floor(n/10) + 1``, at most 21, each with at least p + 2 units to measure."""
+    return max(0, min(n // 10 + 1, n - p - 1, _MOST_STAGES))
 
 
 def evidence_of(p_values: Vector) -> Vector:
@@ -93,10 +94,10 @@ def evidence_of(p_values: Vector) -> Vector:
 
 
 @lru_cache(maxsize=1024)
-def _stage_constants(n: int, p: int, stages: int) -> tuple[Vector, Vector]:
-    """Return the units that each stage measures, and the first parameter of its beta law."""
+def _stage_constants(n: int, p: int, stages: int) -> tuple[Vector, Vector, Vector]:
+    """Return the units that each stage measures, the first parameter of its beta law, and the largest distance."""
     left = n - np.arange(stages, dtype=np.float64)
-    return left, (left - p - 1) / 2
+    return left, (left - p - 1) / 2, np.square(left - 1) / left
 
 
 def wilks_p_values(ratios: Vector, n: int, p: int) -> Vector:
@@ -115,17 +116,19 @@ def wilks_p_values(ratios: Vector, n: int, p: int) -> Vector:
     ndarray
         ``m P(w <= ratio)``, w ~ Beta((m-p-1)/2, p/2): the same shape.
     """
-    left, first = _stage_constants(n, p, ratios.shape[-1])
+    left, first, _ = _stage_constants(n, p, ratios.shape[-1])
     return np.asarray(left * special.betainc(first, p / 2, ratios))
 
 
-def delete_in_turn(whitened: Matrix) -> Stages:
+def delete_in_turn(whitened: Matrix, squared: Vector) -> Stages:
     """Delete the most outlying unit, `most_deleted` times.
 
     Parameters
     ----------
     whitened : ndarray, shape (n, p)
         Centred rows with ``W'W = (n - 1) I``, n > p + 1.
+    squared : ndarray, shape (n,)
+        Squared lengths of the rows.
 
     Returns
     -------
@@ -133,17 +136,17 @@ def delete_in_turn(whitened: Matrix) -> Stages:
         Fewer than `most_deleted` only where the units that remain are collinear.
     """
     n, p = whitened.shape
-    units, ratios = _deleted(whitened, most_deleted(n, p))
-    ratio = np.array(ratios)
-    left, _ = _stage_constants(n, p, ratio.size)
-    p_values = wilks_p_values(ratio, n, p)
-    return Stages(tuple(units), (left - 1) ** 2 / left * (1 - ratio), p_values, evidence_of(p_values))
+    units, found = _deleted(whitened, squared, most_deleted(n, p))
+    ratios = np.array(found)
+    _, _, largest = _stage_constants(n, p, ratios.size)
+    p_values = wilks_p_values(ratios, n, p)
+    return Stages(tuple(units), largest * (1 - ratios), p_values, evidence_of(p_values))
 
 
-def _deleted(whitened: Matrix, stages: int) -> tuple[list[int], list[float]]:
+def _deleted(whitened: Matrix, squared: Vector, stages: int) -> tuple[list[int], list[float]]:
     """Return the units deleted and the ratio of determinants at each stage."""
     n = whitened.shape[0]
-    rest = (1 - 1 / n) - np.einsum("ij,ij->i", whitened, whitened) / (n - 1)
+    rest = (1 - 1 / n) - squared / (n - 1)
     columns = np.empty((stages, n))
     units: list[int] = []
     ratios: list[float] = []
@@ -157,7 +160,8 @@ def _deleted(whitened: Matrix, stages: int) -> tuple[list[int], list[float]]:
         if pivot < _SMALLEST_PIVOT:
             further, following = _afresh(whitened, units, stages - s - 1)
             return units + further, ratios + following
-        column = whitened @ (whitened[i] / (1 - n)) - 1 / n
+        column = whitened @ (whitened[i] / (1 - n))
+        column -= 1 / n
         if s:
             column -= columns[:s, i] @ columns[:s]
         column /= math.sqrt(pivot)
@@ -174,7 +178,8 @@ def _afresh(whitened: Matrix, deleted: list[int], stages: int) -> tuple[list[int
     moments = sample_moments(rows, rows[0])
     if moments.whitened is None:
         return [], []
-    units, ratios = _deleted(moments.whitened, stages)
+    squared = np.einsum("ij,ij->i", moments.whitened, moments.whitened)
+    units, ratios = _deleted(moments.whitened, squared, stages)
     return [int(kept[i]) for i in units], ratios
 
 

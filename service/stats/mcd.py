@@ -17,6 +17,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from operator import itemgetter
 from typing import NamedTuple
 
 import numpy as np
@@ -31,7 +32,6 @@ MOST_SUBSETS = 100_000
 """Up to this many subsets of h units all are tried."""
 
 _CHUNK = 1 << 14
-_MOST_STEPS = 100
 # A determinant that falls by less than this share is the same determinant.
 _SAME = 1e-10
 
@@ -116,9 +116,8 @@ def concentrate(z: Matrix, members: Indices) -> Subsets:
     """
     now = measure(z, members)
     going = np.flatnonzero(np.isfinite(now.log_determinant))
-    for _ in range(_MOST_STEPS):
-        if not going.size:
-            break
+    # Determinants fall by more than `_SAME` at each step, and subsets are finitely many.
+    while going.size:
         part = now.at(going)
         after = measure(z[going], nearest(distances(z[going], part), members.shape[1]))
         now.put(going, after)
@@ -135,9 +134,8 @@ def exchange(z: Matrix, subsets: Subsets) -> Subsets:
     """
     now = subsets
     going = np.flatnonzero(np.isfinite(now.log_determinant))
-    for _ in range(_MOST_STEPS):
-        if not going.size:
-            break
+    # Determinants fall by more than `_SAME` at each step, and subsets are finitely many.
+    while going.size:
         part = now.at(going)
         after = concentrate(z[going], _best_exchange(z[going], part))
         better = part.log_determinant - after.log_determinant > _SAME
@@ -246,7 +244,7 @@ def _best_of_all(z: Matrix, h: int) -> Indices:
     n, p = z.shape
     first, second = np.triu_indices(p)
     features = np.concatenate([z, z[:, first] * z[:, second]], axis=1)
-    best, members = math.inf, np.arange(h)
+    best: list[tuple[float, Indices]] = []
     combinations = itertools.combinations(range(n), h)
     while block := list(itertools.islice(combinations, _CHUNK)):
         index = np.array(block)
@@ -254,9 +252,8 @@ def _best_of_all(z: Matrix, h: int) -> Indices:
         np.put_along_axis(inside, index, 1.0, axis=1)
         determinants = _log_determinants(inside @ features / h, p)
         smallest = int(determinants.argmin())
-        if determinants[smallest] < best:
-            best, members = float(determinants[smallest]), index[smallest]
-    return members
+        best.append((float(determinants[smallest]), index[smallest]))
+    return min(best, key=itemgetter(0))[1]
 
 
 def _log_determinants(means: Matrix, p: int) -> Vector:

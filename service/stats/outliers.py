@@ -25,7 +25,7 @@ from scipy import special
 from service.stats.covariance import Covariance
 from service.stats.deletion import MAXIMUM, SEQUENTIAL, Stages, delete_in_turn, most_deleted
 from service.stats.laws import QuadraticLaw
-from service.stats.moments import Moments
+from service.stats.moments import Moments, sample_moments
 from service.stats.screen import ScreenStatistic, not_applicable
 
 
@@ -89,11 +89,12 @@ class MaximumLaw(Protocol):
 def within_batch(moments: Moments, table: MaximumLaw | None, level: float) -> ScreenStatistic:
     """Look for units outlying within the batch, a group that hides itself included.
 
-    The most outlying unit is deleted ``floor(n/10) + 1`` times, each stage
+    The most outlying unit is deleted ``floor(n/10) + 1`` times, at most 21, each stage
     measuring the units that remain.  Every stage has Wilks' p-value [3]_; the
     statistic is the strongest evidence of any stage, referred to its own null law, so
     that looking more than once costs no level.  All units up to the last significant
-    stage are suspected, those of earlier stages that were masked too [4]_.
+    stage are suspected, those of earlier stages that were masked too [4]_, unless they
+    turn out not to lie apart from the units that remain.
 
     Parameters
     ----------
@@ -117,9 +118,9 @@ def within_batch(moments: Moments, table: MaximumLaw | None, level: float) -> Sc
     if moments.whitened is None:
         return not_applicable(str(moments.obstacle))
     squared = np.einsum("ij,ij->i", moments.whitened, moments.whitened)
-    stages = delete_in_turn(moments.whitened)
+    stages = delete_in_turn(moments.whitened, squared)
     p_value = _p_value_of(stages.strongest, stages.size, table)
-    units = _suspected(stages, table, level) if p_value <= level else ()
+    units = _suspected(moments, stages, table, level) if p_value <= level else ()
     detail = {
         "squared_distances": squared.tolist(),
         "limit": _limit(n, p, level, table),
@@ -130,7 +131,7 @@ def within_batch(moments: Moments, table: MaximumLaw | None, level: float) -> Sc
         p_value,
         "asymptotic" if table is None else "monte-carlo",
         _p_value_of(stages.strongest, stages.size, None),
-        tuple(sorted(units)),
+        units,
         detail,
     )
 
@@ -142,12 +143,32 @@ def _p_value_of(evidence: float, stages: int, table: MaximumLaw | None) -> float
     return bound if table is None else min(bound, table.upper(SEQUENTIAL, evidence))
 
 
-def _suspected(stages: Stages, table: MaximumLaw | None, level: float) -> tuple[int, ...]:
-    """Return the units deleted up to the last stage that is significant by itself."""
+def _suspected(moments: Moments, stages: Stages, table: MaximumLaw | None, level: float) -> tuple[int, ...]:
+    """Return the units deleted up to the last stage that is significant by itself, those of them that are far out."""
+    last = 1
     for s in range(stages.size, 1, -1):
         if _p_value_of(float(stages.evidence[s - 1]), stages.size, table) <= level:
-            return stages.units[:s]
-    return stages.units[:1]
+            last = s
+            break
+    return _confirmed(moments, list(stages.units[:last]), level)
+
+
+def _confirmed(moments: Moments, deleted: list[int], level: float) -> tuple[int, ...]:
+    """Return the deleted units that lie apart from those that remain.
+
+    A sound unit may be deleted first, while a group still hides itself.  Each is taken as a new
+    observation beside the m units that remain: ``D2 m/(m+1) (m-p)/(p(m-1))`` is F(p, m-p) [1]_,
+    at level/n; the farthest always stays.
+    """
+    kept = np.delete(moments.deviations, deleted, axis=0)
+    rest = sample_moments(kept, kept[0])
+    if rest.covariance is None:
+        return tuple(sorted(deleted))
+    m = rest.units
+    squared = rest.covariance.squared_distances(moments.deviations[deleted] - kept[0] - rest.difference)
+    limit = QuadraticLaw(rest.dimension, m - 1.0).critical_value(level / moments.units) * (m + 1) / m
+    limit = min(limit, float(squared.max()))
+    return tuple(sorted(unit for unit, distance in zip(deleted, squared, strict=True) if distance >= limit))
 
 
 def _limit(n: int, p: int, level: float, table: MaximumLaw | None) -> float:

@@ -208,8 +208,6 @@ def _by_f_law(estimate: RobustEstimate, level: float) -> ScreenStatistic:
     squared = estimate.raw_squared_distances
     n, p = squared.size, estimate.centre.size
     law = robust_laws.hardin_rocke(n, p)
-    if law.denominator <= 0:
-        return not_applicable(f"no law of robust distances is known for {n} units of {p} characteristics")
     largest = float(squared.max())
     bound = law.limit(level)
     return ScreenStatistic(

@@ -10,7 +10,7 @@ probability 0.05 [1]_.
 - Both: turned, as the batch is wider one way and narrower another.
 - Neither, though the whole differs: wider or narrower by ``ln |S|/|Sigma0|``
   where that departs from its exact mean by 1.96 of its exact standard deviations
-  [2]_ (for n <= p, by the mean variance ratio); else turned.
+  [2]_ (for n <= p, by the mean variance ratio and its chi-square law); else turned.
 
 References
 ----------
@@ -20,6 +20,8 @@ References
 .. [2] T. W. Anderson, An Introduction to Multivariate Statistical Analysis, 3rd
    ed., Wiley 2003, section 7.5: the generalised variance is a product of
    independent chi-squares.
+.. [3] A. C. Rencher and W. F. Christensen, Methods of Multivariate Analysis, 3rd
+   ed., Wiley 2012, section 7.2.2.
 """
 
 from __future__ import annotations
@@ -33,6 +35,7 @@ import numpy as np
 from scipy import special
 from scipy.linalg import lapack
 
+from service.stats import tails
 from service.stats.arrays import Matrix, Vector
 from service.stats.covariance import Covariance
 from service.stats.moments import Moments
@@ -79,9 +82,11 @@ def describe(eigen: Eigen, moments: Moments, sigma0: Covariance) -> dict[str, ob
     dict
         ``direction``; ``expected_range`` of the eigenvalues; ``log_volume``, ``ln |S|/|Sigma0|``, with
         its standardised value ``log_volume_z`` (None for n <= p); ``mean_variance_ratio``;
-        ``standard_deviation_ratios``, batch to reference, shape (p,); ``widest`` and ``narrowest``,
-        combinations of the characteristics in reference standard deviations, of reference variance
-        1; ``angle`` in degrees between the longest axes of batch and reference.
+        ``proportionality_p_value``, small where size alone does not explain the difference (None for
+        n <= p or an estimated reference); ``standard_deviation_ratios``, batch to reference, shape
+        (p,); ``widest`` and ``narrowest``, combinations of the characteristics in reference standard
+        deviations, of reference variance 1; ``angle`` in degrees between the longest axes of batch
+        and reference.
     """
     p, f1, f2 = sigma0.dimension, moments.units - 1.0, sigma0.degrees_of_freedom
     low, high = eigenvalue_range(p, f1, f2)
@@ -94,11 +99,40 @@ def describe(eigen: Eigen, moments: Moments, sigma0: Covariance) -> dict[str, ob
         "log_volume": float(np.log(eigen.values).sum()) if f1 >= p else None,
         "log_volume_z": z,
         "mean_variance_ratio": float(eigen.values.mean()),
+        "proportionality_p_value": _proportional(eigen.values, f1) if f1 >= p and math.isinf(f2) else None,
         "standard_deviation_ratios": np.sqrt(np.diagonal(scatter)).tolist(),
         "widest": combinations[:, -1].tolist(),
         "narrowest": combinations[:, 0].tolist() if f1 >= p else None,
         "angle": _angle(scatter, sigma0.correlation),
     }
+
+
+def proportionality(values: Vector, f: float) -> tuple[float, float]:
+    """Test that the covariance is a multiple of the reference, which is the test of sphericity of whitened units.
+
+    Parameters
+    ----------
+    values : ndarray, shape (p,)
+        Eigenvalues of ``Sigma0^-1 S``.
+    f : float
+        Degrees of freedom of S, at least p.
+
+    Returns
+    -------
+    tuple of float
+        ``u = |V|/(tr V/p)^p`` and ``u' = -(f - (2p^2+p+2)/(6p)) ln u``, by the large-sample law chi-square
+        with p(p+1)/2 - 1 degrees of freedom [3]_.
+    """
+    p = values.size
+    log_u = float(np.log(values).sum()) - p * math.log(values.mean())
+    return math.exp(log_u), -(f - (2 * p * p + p + 2) / (6 * p)) * log_u
+
+
+def _proportional(values: Vector, f: float) -> float | None:
+    p = values.size
+    if p == 1:
+        return None
+    return tails.chi_square_tail(max(0.0, proportionality(values, f)[1]), p * (p + 1) / 2 - 1).p_value
 
 
 def _direction(values: Vector, expected: tuple[float, float], z: float | None, f1: float) -> Direction:
@@ -108,8 +142,8 @@ def _direction(values: Vector, expected: tuple[float, float], z: float | None, f
     if wide:
         return "turned"
     if z is None:
-        # f1 tr(Sigma0^-1 S) is chi-square(p f1): its mean and standard deviation.
-        z = float(values.mean() - 1) * math.sqrt(values.size * f1 / 2)
+        # f1 tr(Sigma0^-1 S) is chi-square(p f1), here as the normal deviate of the same probability.
+        z = float(special.ndtri(special.chdtr(values.size * f1, f1 * values.sum())))
     if abs(z) < _NORMAL_95:
         return "turned"
     return "wider" if z > 0 else "narrower"
