@@ -19,7 +19,7 @@ References
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
@@ -35,6 +35,7 @@ _SMALLEST_TRUSTED = 1e-200
 _SMALLEST_INVERTED, _LARGEST_INVERTED_DOF = 1e-100, 1e6
 _LARGEST_LOG = 709.0
 _TINY = 1e-300
+_CONVERGED, _MOST_TERMS = 5e-16, 100_000
 
 
 class Tail(NamedTuple):
@@ -48,43 +49,39 @@ def _from_logarithm(log_p: float) -> Tail:
     return Tail(math.exp(log_p), log_p / _LN10)
 
 
-def _lentz(first: float, terms: Iterable[tuple[float, float]]) -> float:
-    """Return the continued fraction first + a1/(b1 + a2/(b2 + ...)) by Lentz's method."""
+def _lentz(first: float, term: Callable[[int], tuple[float, float]]) -> float:
+    """Return the continued fraction first + a1/(b1 + a2/(b2 + ...)) by Lentz's method, (am, bm) being term(m)."""
     value = first or _TINY
-    c, d = value, 0.0
-    for a, b in terms:
+    c, d, step, m = value, 0.0, math.inf, 0
+    # Two units in the last place: rounding may never let a step be 1 exactly.
+    while abs(step - 1.0) > _CONVERGED and m < _MOST_TERMS:
+        m += 1
+        a, b = term(m)
         d = 1.0 / (b + a * d or _TINY)
         c = b + a / c or _TINY
         step = c * d
         value *= step
-        if abs(step - 1.0) < 1e-16:
-            break
     return value
-
-
-def _gamma_terms(a: float, x: float) -> Iterator[tuple[float, float]]:
-    for i in range(1, 100_000):
-        yield -i * (i - a), x + 2 * i + 1 - a
 
 
 def _log_gamma_upper(a: float, x: float) -> float:
     """Return ln Q(a, x), the regularised upper incomplete gamma function (DLMF 8.9.2)."""
-    fraction = _lentz(x + 1 - a, _gamma_terms(a, x))
+    fraction = _lentz(x + 1 - a, lambda m: (-m * (m - a), x + 2 * m + 1 - a))
     return a * math.log(x) - x - float(special.gammaln(a)) - math.log(fraction)
-
-
-def _beta_terms(a: float, b: float, x: float, y: float) -> Iterator[tuple[float, float]]:
-    for m in range(1, 100_000):
-        middle = a + 2 * m
-        above = (a + m - 1) * (a + b + m - 1) * m * (b - m) * (x / (middle - 1)) ** 2
-        yield above, m + m * (b - m) * x / (middle - 1) + (a + m) / (middle + 1) * (a * y - b * x + 1 + m * (1 + y))
 
 
 def _log_beta_lower(a: float, b: float, log_x: float) -> float:
     """Return ln I_x(a, b), the regularised incomplete beta function, where x is below the mean."""
     # Both x and its complement to 1 to full precision, as a may be many orders above b.
     x, y = math.exp(log_x), -math.expm1(log_x)
-    fraction = _lentz(a / (a + 1) * (a * y - b * x + 1), _beta_terms(a, b, x, y))
+    gap = a * y - b * x + 1
+
+    def term(m: int) -> tuple[float, float]:
+        middle = a + 2 * m
+        above = (a + m - 1) * (a + b + m - 1) * m * (b - m) * (x / (middle - 1)) ** 2
+        return above, m + m * (b - m) * x / (middle - 1) + (a + m) / (middle + 1) * (gap + m * (1 + y))
+
+    fraction = _lentz(a / (a + 1) * gap, term)
     return a * log_x + b * math.log(y) - float(special.betaln(a, b)) - math.log(fraction)
 
 
