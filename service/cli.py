@@ -1,4 +1,7 @@
-"""The command ``acceptance``.  Each command imports what it needs, so that ``verify`` needs neither Flask nor a store."""
+"""The command ``acceptance``.
+
+Each command imports what it needs, so that ``verify`` needs neither Flask nor a store.
+"""
 
 from __future__ import annotations
 
@@ -6,7 +9,7 @@ import json
 import os
 import sys
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
@@ -14,6 +17,8 @@ from service import __version__
 from service.errors import ServiceError
 
 if TYPE_CHECKING:
+    from marshmallow import Schema
+
     from service.procedures.site import Site
 
 HOLDS, REFUTED, CANNOT_CHECK = 0, 1, 2
@@ -81,9 +86,9 @@ def token() -> None:
 @click.option("--days", type=click.IntRange(1), help="Days until it expires; never where left out.")
 def token_new(name: str, roles: tuple[str, ...], days: int | None) -> None:
     """Issue a token for NAME, a person or machine, and print it once."""
-    from service.procedures.tokens import OPERATOR, as_roles, issue
+    from service.procedures.tokens import OPERATOR, issue
 
-    click.echo(issue(_site(), OPERATOR, name, as_roles(roles), days))
+    click.echo(issue(_site(), OPERATOR, name, roles, days))
 
 
 @token.command("list")
@@ -92,23 +97,13 @@ def token_list(as_json: bool) -> None:
     """List tokens, without their secrets."""
     with _site().store.reading() as view:
         rows = view.tokens()
-    documents = [
-        {
-            "token_id": row.token_id,
-            "subject": row.subject,
-            "roles": list(row.roles),
-            "issued_at": row.issued_at,
-            "expires_at": row.expires_at,
-            "revoked_at": row.revoked_at,
-        }
-        for row in rows
-    ]
     if as_json:
-        click.echo(json.dumps(documents, indent=2))
+        shown = ("token_id", "subject", "roles", "issued_at", "expires_at", "revoked_at")
+        click.echo(json.dumps([{member: getattr(row, member) for member in shown} for row in rows], indent=2))
         return
-    for item in documents:
-        state = f"revoked {item['revoked_at']}" if item["revoked_at"] else f"expires {item['expires_at'] or 'never'}"
-        click.echo(f"{item['token_id']}  {item['subject']}  {','.join(item['roles'])}  {state}")
+    for row in rows:
+        state = f"revoked {row.revoked_at}" if row.revoked_at else f"expires {row.expires_at or 'never'}"
+        click.echo(f"{row.token_id}  {row.subject}  {','.join(row.roles)}  {state}")
 
 
 @token.command("revoke")
@@ -175,6 +170,74 @@ def _print_verdict(as_json: bool, verdict: dict[str, object]) -> None:
                 click.echo(f"  - {item if isinstance(item, str) else item['pointer'] + ': ' + item['detail']}")
         else:
             click.echo(f"{member.replace('_', ' ')}: {value}")
+
+
+@main.command()
+@click.argument("specification", type=click.Path(exists=True, dir_okay=False, path_type=Path))
+@click.option("--units", type=click.IntRange(1), required=True, help="Units in a batch.")
+@click.option("--shift", type=click.FloatRange(0), help="Shift of the mean in Mahalanobis units.")
+@click.option("--difference", "differences", multiple=True, metavar="NAME=VALUE", help="Shift of one characteristic.")
+@click.option("--power", "wanted", type=click.FloatRange(0, 1, True, True), default=0.9, show_default=True)
+@click.option("--json", "as_json", is_flag=True, help="Print JSON.")
+def plan(
+    specification: Path, *, units: int, shift: float | None, differences: tuple[str, ...], wanted: float, as_json: bool
+) -> None:
+    """Say what a SPECIFICATION, a JSON file, will and will not detect.
+
+    The shift is one number in Mahalanobis units (--shift), or differences in units of measurement (--difference).
+    """
+    from schemas.specification import SpecificationSchema
+    from service.domain.planning import Question
+    from service.domain.planning import plan as plan_of
+    from service.domain.specification import Specification
+    from service.signing.canonical import strict_loads
+
+    if (shift is None) == (not differences):
+        raise click.UsageError("Give --shift, or one or more --difference, and not both.")
+    rule = Specification.from_dict(_loaded(SpecificationSchema(), strict_loads(specification.read_bytes())))
+    moved = shift if shift is not None else dict(_difference(text) for text in differences)
+    document = plan_of(rule, Question(units, moved, wanted))
+    click.echo(json.dumps(document, indent=2) if as_json else _in_lines(document))
+
+
+def _loaded(schema: Schema, document: object) -> dict[str, Any]:
+    """Load a file's document by its schema, or end with every fault and its place."""
+    from marshmallow import ValidationError
+
+    from service.http.problems import refused
+
+    try:
+        loaded: dict[str, Any] = schema.load(document)  # type: ignore[arg-type]
+    except ValidationError as error:
+        raise refused(error) from error
+    return loaded
+
+
+def _difference(text: str) -> tuple[str, float]:
+    name, _, value = text.partition("=")
+    try:
+        return name, float(value)
+    except ValueError as error:
+        raise click.UsageError(f"--difference takes NAME=VALUE; {text!r} has no number.") from error
+
+
+def _in_lines(document: dict[str, Any]) -> str:
+    """Return a plan as lines of words and a small table."""
+    curve = document.pop("operating_characteristic") or []
+    lines = [f"{name.replace('_', ' ')}: {_short(value)}" for name, value in document.items()]
+    lines += ["", "   shift   chance of acceptance"] if curve else []
+    lines += [f"{point['shift']:8.3f}   {point['chance_of_acceptance']:.4f}" for point in curve[::4]]
+    return "\n".join(lines)
+
+
+def _short(value: object) -> str:
+    if isinstance(value, float):
+        return f"{value:.4g}"
+    if isinstance(value, dict):
+        return ", ".join(f"{name.replace('_', ' ')} {_short(inner)}" for name, inner in value.items())
+    if isinstance(value, list):
+        return "; ".join(map(_short, value))
+    return "none" if value is None else str(value)
 
 
 @main.command()

@@ -22,11 +22,12 @@ from dataclasses import dataclass
 from typing import Any
 
 from service.domain.batch import Batch
-from service.domain.policy import POLICY_VERSION, NullLaws, evaluate
+from service.domain.policy import POLICY_VERSION, evaluate
 from service.domain.specification import Specification
 from service.errors import Fault, RecomputationMismatchError, UnknownFormatError, VerificationError
 from service.signing import canonical
 from service.signing.envelope import TrustedKeys, open_envelope
+from service.stats.null_laws import NullLaws
 
 BUNDLE_FORMAT = "acceptance-bundle/1"
 
@@ -60,12 +61,12 @@ class Verified:
     not_shown: tuple[str, ...]
 
 
-def verify(bundle: Mapping[str, Any], trusted: TrustedKeys, null_laws: NullLaws) -> Verified:
+def verify(bundle: object, trusted: TrustedKeys, null_laws: NullLaws) -> Verified:
     """Verify a bundle by the steps of this module.
 
     Parameters
     ----------
-    bundle : mapping
+    bundle : object
         A parsed bundle.
     trusted : mapping
         Header segment to public key, from `service.signing.keys.trusted_keys`.
@@ -85,7 +86,7 @@ def verify(bundle: Mapping[str, Any], trusted: TrustedKeys, null_laws: NullLaws)
         Where something is refuted.
     """
     # Step 1
-    if bundle.get("format") != BUNDLE_FORMAT:
+    if not isinstance(bundle, Mapping) or bundle.get("format") != BUNDLE_FORMAT:
         raise UnknownFormatError(f"The file is not a bundle of format {BUNDLE_FORMAT}.")
     # Steps 2 and 3
     decision = _payload(_text(bundle, "decision"), trusted, "decision")

@@ -38,6 +38,9 @@ CORRELATION = np.array(
 REFERENCE_DEGREES_OF_FREEDOM = 118
 SACHETS = 12
 
+_LOG_DEVIATION = 1.1
+_SKEWED_DRAW = 466
+
 FILES = {
     "clean": "PX-2601.csv",
     "joint-shift": "PX-2602.csv",
@@ -84,13 +87,14 @@ def lots() -> Mapping[str, tuple[tuple[str, ...], Matrix]]:
 
 
 def _noise(shows: str) -> Matrix:
-    return next(normal_batches(f"{SEED}: {shows}", SACHETS, len(NAMES), 1))[0]
+    batch: Matrix = next(normal_batches(f"{SEED}: {shows}", SACHETS, len(NAMES), 1))[0]
+    return batch
 
 
 def _sample(shows: str, mean: Vector | None = None) -> Matrix:
     """Return correlated deviations in standard deviations, their mean as asked to the last digit."""
     noise = _noise(shows) @ np.linalg.cholesky(CORRELATION).T
-    return noise if mean is None else noise - noise.mean(axis=0) + mean
+    return np.asarray(noise if mean is None else noise - noise.mean(axis=0) + mean)
 
 
 def _with_outlying_sachet(deviations: Matrix) -> Matrix:
@@ -101,11 +105,15 @@ def _with_outlying_sachet(deviations: Matrix) -> Matrix:
 
 
 def _skewed() -> Matrix:
-    """Return deviations with one long tail: most sachets a little low, a few far up, along one direction."""
-    noise = _sample("skewed")
-    tail = np.exp(1.1 * _noise("tail")[:, :1])
-    shaped = 0.35 * noise + 0.85 * (tail - np.median(tail)) * np.array([1.0, 0.8, 0.5, 0.4, -0.3])
-    return shaped - shaped.mean(axis=0)
+    """Return deviations whose parts are log-normal: long tails upwards, mean and spread as specified.
+
+    Of many draws, the one that is taken shows skewness without any sachet that lies apart by itself.
+    """
+    noise = next(normal_batches(f"{SEED}: skewed", SACHETS, len(NAMES), _SKEWED_DRAW + 1))[_SKEWED_DRAW]
+    variance = _LOG_DEVIATION**2
+    parts = (np.exp(_LOG_DEVIATION * noise) - np.exp(variance / 2)) / np.sqrt(np.expm1(variance) * np.exp(variance))
+    shaped = parts @ np.linalg.cholesky(CORRELATION).T
+    return np.asarray(shaped - shaped.mean(axis=0))
 
 
 def _reported(deviations: Matrix) -> Matrix:

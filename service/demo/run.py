@@ -7,7 +7,7 @@ import signal
 import subprocess
 import sys
 import textwrap
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -70,7 +70,7 @@ class Demonstration:
     @contextmanager
     def service(self) -> Iterator[str]:
         """Run the service on a free port and yield its address; stop it by its process on the way out."""
-        process = subprocess.Popen(  # noqa: S603 - this program itself
+        process = subprocess.Popen(
             [sys.executable, "-m", "service", "serve", "--port", "0"],
             env=self.environment,
             stdout=subprocess.PIPE,
@@ -81,6 +81,8 @@ class Demonstration:
         finally:
             process.send_signal(signal.SIGTERM)
             process.wait(WAIT)
+            assert process.stdout is not None
+            process.stdout.close()
 
 
 def _address(process: subprocess.Popen[str]) -> str:
@@ -113,36 +115,63 @@ def run(*, once: bool, folder: Path | None) -> int:
         Exit code: 0 where every lot was answered as the demonstration says.
     """
     demonstration = Demonstration((folder or Path("acceptance-demo")).resolve())
-    _say(f"Store, key and tokens in {demonstration.folder}")
+    try:
+        with run_lots(demonstration, say=click.echo) as address:
+            click.echo(_onward(address, demonstration.folder))
+            if not once:
+                _wait()
+    except SurprisingLotError as error:
+        click.echo(str(error), err=True)
+        return 1
+    return 0
+
+
+class SurprisingLotError(Exception):
+    """A lot of the demonstration was not answered as it is made to be."""
+
+
+@contextmanager
+def run_lots(demonstration: Demonstration, say: Callable[[str], None]) -> Iterator[str]:
+    """Set up, serve, decide the six lots; yield the address of the service, which runs until the end.
+
+    Parameters
+    ----------
+    demonstration : Demonstration
+        Where to keep everything.
+    say : callable
+        Takes each line of progress.
+
+    Raises
+    ------
+    SurprisingLotError
+        Where a lot was not answered as expected.
+    """
+    say(f"Store, key and tokens in {demonstration.folder}")
     demonstration.command("upgrade")
     tokens = {name: demonstration.token_of(name) for name in PEOPLE}
     with demonstration.service() as address:
-        _say(f"The service runs at {address}")
-        _approve_specification(address, tokens)
-        surprises = _decide_lots(address, tokens["pipeline"])
-        _say(_onward(address, demonstration.folder))
-        if not once:
-            _wait()
-    return 1 if surprises else 0
-
-
-def _say(text: str) -> None:
-    click.echo(text)
+        say(f"The service runs at {address}")
+        if _approve_specification(address, tokens):
+            say("Specification premix-a, version 1: drafted by statistician, approved by quality-manager\n")
+        surprises = _decide_lots(address, tokens["pipeline"], say)
+        if surprises:
+            raise SurprisingLotError(f"not answered as expected: {', '.join(surprises)}")
+        yield address
 
 
 def _post(address: str, path: str, token: str, body: Mapping[str, Any]) -> requests.Response:
     return requests.post(f"{address}{path}", json=body, headers={"Authorization": f"Bearer {token}"}, timeout=WAIT)
 
 
-def _approve_specification(address: str, tokens: Mapping[str, str]) -> None:
-    """Register the specification as one person and approve it as another, unless that was done before."""
+def _approve_specification(address: str, tokens: Mapping[str, str]) -> bool:
+    """Register the specification as one person and approve it as another; return False where it was done before."""
     seen = requests.get(
         f"{address}/v1/specifications/premix-a/versions/1",
         headers={"Authorization": f"Bearer {tokens['auditor']}"},
         timeout=WAIT,
     )
     if seen.ok:
-        return
+        return False
     drafted = _post(address, "/v1/specifications", tokens["statistician"], load.specification())
     drafted.raise_for_status()
     path = "/v1/specifications/premix-a/versions/1/approval"
@@ -153,7 +182,7 @@ def _approve_specification(address: str, tokens: Mapping[str, str]) -> None:
         timeout=WAIT,
     )
     approved.raise_for_status()
-    _say("Specification premix-a, version 1: drafted by statistician, approved by quality-manager\n")
+    return True
 
 
 EXPECTED = {
@@ -167,17 +196,17 @@ EXPECTED = {
 """What each lot of the demonstration is made to show."""
 
 
-def _decide_lots(address: str, token: str) -> list[str]:
-    """Post each lot, print a line for it, and return the lots that were not answered as expected."""
+def _decide_lots(address: str, token: str, say: Callable[[str], None]) -> list[str]:
+    """Post each lot, say a line for it, and return the lots that were not answered as expected."""
     surprises = []
-    _say(f"{'lot':<9} {'outcome':<9} main reason")
+    say(f"{'lot':<9} {'outcome':<9} main reason")
     for batch in load.batches():
         answer = _post(address, "/v1/decisions", token, {"batch": batch, "specification": {"code": "premix-a"}})
         outcome, reason = _read(answer)
         lines = textwrap.wrap(reason, 96)
-        _say(f"{batch['lot']:<9} {outcome:<9} {lines[0]}")
+        say(f"{batch['lot']:<9} {outcome:<9} {lines[0]}")
         for line in lines[1:]:
-            _say(f"{'':<19} {line}")
+            say(f"{'':<19} {line}")
         if outcome != EXPECTED[batch["lot"]]:
             surprises.append(batch["lot"])
     return surprises
@@ -201,8 +230,8 @@ The interface is described at {address}/docs"""
 
 
 def _wait() -> None:
-    _say("\nThe service keeps running. Ctrl-C stops it.")
+    click.echo("\nThe service keeps running. Ctrl-C stops it.")
     try:
         signal.pause()
     except KeyboardInterrupt:
-        _say("\nStopping.")
+        click.echo("\nStopping.")

@@ -33,6 +33,8 @@ class Batch:
         Order of measurement: numbers, or seconds since 1970 of time stamps.
     runs : int
         How many distinct runs the batch names; 0 where it names none.
+    missing : tuple of (int, int)
+        Row and column, from 0, of every missing cell.
     document : mapping
         The batch as it stands in its canonical form.
     digest : str
@@ -47,6 +49,7 @@ class Batch:
     units: tuple[str, ...]
     sequence: Vector | None
     runs: int
+    missing: tuple[tuple[int, int], ...]
     document: Mapping[str, Any]
     digest: str
 
@@ -82,14 +85,10 @@ class Batch:
             units=tuple(data.get("units") or (str(i + 1) for i in range(n))),
             sequence=_order(data.get("sequence")),
             runs=len(set(data.get("runs") or ())),
+            missing=tuple((int(i), int(j)) for i, j in np.argwhere(np.isnan(rows))),
             document=data,
             digest=canonical.digest(data),
         )
-
-    @property
-    def missing(self) -> list[tuple[int, int]]:
-        """Row and column, from 0, of every missing cell."""
-        return [(int(i), int(j)) for i, j in np.argwhere(np.isnan(self.rows))]
 
 
 def _order(sequence: Sequence[float | str] | None) -> Vector | None:

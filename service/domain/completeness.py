@@ -56,6 +56,10 @@ def _constant_columns(rows: Matrix) -> list[int]:
 
 def _copied_units(rows: Matrix) -> list[list[int]]:
     """Return groups of units whose every value is the same, unless chance makes such copies."""
+    ordered = np.sort(rows, axis=0)
+    # Where one characteristic tells every unit from every other, no unit is a copy: the usual case, and quick.
+    if (ordered[1:] != ordered[:-1]).all(axis=0).any():
+        return []
     _, first, inverse, counts = np.unique(rows, axis=0, return_index=True, return_inverse=True, return_counts=True)
     if first.size == rows.shape[0] or _expected_copies(rows) >= _CHANCE:
         return []
@@ -71,4 +75,5 @@ def _expected_copies(rows: Matrix) -> float:
     """
     n = rows.shape[0]
     shares = [np.unique(column, return_counts=True)[1] / n for column in rows.T]
-    return n * (n - 1) / 2 * math.prod(max(float(np.square(s).sum() - 1 / n), 0.0) for s in shares)
+    repeat_rates = [max(float(np.square(share).sum()) - 1 / n, 0.0) for share in shares]
+    return float(n * (n - 1) / 2 * math.prod(repeat_rates))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from types import MappingProxyType
 
 from service.domain.batch import Batch
@@ -32,7 +32,6 @@ _LAWS = MappingProxyType(
     {
         "outlying-against-specification": "the specification",
         "outlying-within-batch": "the spread of the batch itself",
-        "outlying-robust": "the bulk of the batch",
     }
 )
 
@@ -61,12 +60,15 @@ def reasons(holding: Iterable[Finding], screens: tuple[Finding, ...], batch: Bat
 
 def _reason(code: str, group: list[Finding], evidence: str, batch: Batch) -> Reason:
     first = group[0]
-    words = {
+    words: dict[str, Callable[[], dict[str, object]]] = {
         "suspected-data": lambda: {"findings": ", ".join(_found(finding) for finding in group)},
         "outlying-units": lambda: {"units": _units(first, batch), "law": _LAWS[first.name]},
         "normality-in-doubt": lambda: {"screens": ", ".join(_with_p(finding) for finding in group)},
-        "dispersion-differs": lambda: {"direction": first.result.detail.get("direction", "different")},
-        "order-dependent": dict,
+        "dispersion-differs": lambda: {
+            "direction": first.result.detail.get("direction", "different"),
+            "p": significant(first.result.p_value or 0.0, 2),
+        },
+        "order-dependent": lambda: {"p": significant(first.result.p_value or 0.0, 2)},
         "screen-not-computable": lambda: {"screen": first.name, "why": first.result.why},
     }
     return reason(code, evidence, **words[code]())
@@ -83,4 +85,4 @@ def _with_p(finding: Finding) -> str:
 
 def _units(finding: Finding, batch: Batch) -> str:
     labels = [batch.units[i] for i in finding.result.units]
-    return f"unit {labels[0]}" if len(labels) == 1 else "units " + ", ".join(labels)
+    return f"Unit {labels[0]} lies" if len(labels) == 1 else f"Units {', '.join(labels)} lie"

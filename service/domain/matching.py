@@ -72,6 +72,8 @@ def _unit_faults(batch: Batch, specification: Specification) -> list[Fault]:
 
 def _bound_faults(rows: Matrix, batch: Batch, specification: Specification) -> list[Fault]:
     outside = (rows < specification.lower_bounds) | (rows > specification.upper_bounds)
+    if not outside.any():
+        return []
     faults = []
     for i, j in np.argwhere(outside):
         name, unit = specification.names[j], specification.measurement_units[j]

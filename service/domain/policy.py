@@ -8,6 +8,8 @@ Order of the rule:
 1. Values are matched to the specification; what does not fit is an error, not an outcome.
 2. Where cells are missing and the specification says ``hold``, the lot is held without a test.
 3. The mean test is made, and the question answered: agree, differ, or undecided.
+   Where a joint screen throws doubt on normality, the sign-flip law of the same statistic stands beside
+   it, and decides the difference question where every failed screen says so.
 4. The screens are made.  One that throws doubt on the test itself holds the lot, whatever the test
    said.  Units outlying against the specification do not throw doubt on a rejection (a shifted mean
    carries its units with it), so they hold only a lot that would otherwise be accepted.
@@ -16,6 +18,7 @@ Order of the rule:
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
@@ -25,11 +28,14 @@ from service.domain.batch import Batch
 from service.domain.matching import matched_rows
 from service.domain.reasons import Reason, reason
 from service.domain.screening import Evidence, Finding, screen_all, screen_completeness
-from service.domain.specification import Specification
+from service.domain.specification import JOINT_NORMALITY, Specification
 from service.domain.verdict import Verdict, answer
+from service.errors import IllConditionedError, NotPositiveDefiniteError, TooFewUnitsError
 from service.stats.location import LocationResult, chi_square_test, hotelling_test, pooled_test, reference_test
 from service.stats.moments import Moments, sample_moments
 from service.stats.null_laws import NullLaws
+from service.stats.screen import ScreenStatistic, not_applicable
+from service.stats.sign_flip import batch_sign_flip, pooled_sign_flip, reference_sign_flip
 
 POLICY_VERSION = "1"
 """Version of this decision rule; a change of any outcome or number changes it."""
@@ -101,14 +107,19 @@ def evaluate(batch: Batch, specification: Specification, null_laws: NullLaws, *,
     if batch.missing:
         return _without_values(batch, specification, assumptions)
     moments = sample_moments(rows, specification.target)
-    test = mean_test_of(specification, moments)
-    screens = screen_all(Evidence(batch, specification, rows, moments, null_laws))
-    verdict = answer(specification, moments, test, screens)
+    try:
+        test = mean_test_of(specification, moments)
+    except (TooFewUnitsError, NotPositiveDefiniteError, IllConditionedError) as error:
+        raise error.at("/rows") from error
+    screens = screen_all(Evidence(batch, specification, rows, moments, null_laws.get(moments.units, moments.dimension)))
+    follow_up = documents.follow_up(specification, test)
+    signs = sign_flips(specification, moments, screens)
+    verdict = answer(specification, test, moments.units, follow_up, signs)
     outcome, reasons = conclude(verdict, screens, batch)
     numbers = {
         "test": documents.test(specification, test, verdict),
         "mean": (specification.target + test.difference).tolist(),
-        "follow_up": documents.follow_up(specification, test),
+        "follow_up": follow_up,
         "screens": [finding.to_dict() for finding in screens],
         "power": documents.power(specification, test, verdict),
     }
@@ -127,6 +138,20 @@ def mean_test_of(specification: Specification, moments: Moments) -> LocationResu
     return test(moments, specification.sigma0, alpha, target_units=m)
 
 
+def sign_flips(specification: Specification, moments: Moments, screens: tuple[Finding, ...]) -> ScreenStatistic | None:
+    """Return the sign-flip check of the mean test, where a joint screen throws doubt on normality; else None."""
+    doubted = any(finding.state == "not-met" and finding.name in JOINT_NORMALITY for finding in screens)
+    if not doubted:
+        return None
+    if math.isfinite(specification.target_units):
+        return not_applicable("an estimated target breaks the symmetry that sign flips rest on")
+    if specification.sigma0 is None:
+        return batch_sign_flip(moments)
+    if specification.covariance_kind == "pooled":
+        return pooled_sign_flip(moments, specification.sigma0)
+    return reference_sign_flip(moments, specification.sigma0)
+
+
 def conclude(verdict: Verdict, screens: tuple[Finding, ...], batch: Batch) -> tuple[Outcome, tuple[Reason, ...]]:
     """Return the outcome that follows from verdict and screens, and its reasons in order of weight.
 
@@ -139,8 +164,9 @@ def conclude(verdict: Verdict, screens: tuple[Finding, ...], batch: Batch) -> tu
     batch : Batch
         For the labels of its units.
     """
-    doubts = tuple(f for f in screens if f.holds and f.name not in findings.OF_UNITS)
-    outlying = tuple(f for f in screens if f.holds and f.name in findings.OF_UNITS)
+    holding = [finding for finding in screens if finding.holds(signs_decide=verdict.by_signs)]
+    doubts = [finding for finding in holding if finding.name not in findings.OF_UNITS]
+    outlying = [finding for finding in holding if finding.name in findings.OF_UNITS]
     stated = findings.reasons(doubts + outlying, screens, batch)
     if doubts or (outlying and verdict.outcome != "rejected"):
         return "held", (*stated, *verdict.reasons)

@@ -9,11 +9,12 @@ from typing import Any, Literal
 
 from service.domain.batch import Batch
 from service.domain.completeness import completeness
-from service.domain.specification import SCREEN_NAMES, ScreenRule, Specification
+from service.domain.specification import MADE_WHEN_ASKED, SCREEN_NAMES, ScreenRule, Specification
 from service.stats import dispersion, normality, ordering, outliers, resolution, robust, shapiro_wilk
-from service.stats.arrays import Matrix
+from service.stats.arrays import Matrix, Vector
 from service.stats.moments import Moments
-from service.stats.null_laws import NullLaws
+from service.stats.null_laws import NullTable
+from service.stats.robust_table import robust_table
 from service.stats.screen import ScreenStatistic, not_applicable
 
 State = Literal["met", "not-met", "not-applicable"]
@@ -33,15 +34,21 @@ class Evidence:
         Values in the specification's order.
     moments : Moments
         Of `rows` about the target.
-    null_laws : NullLaws
-        Provider of exact null laws.
+    table : NullTable or None
+        Exact null laws at this size, where there are any.
     """
 
     batch: Batch
     specification: Specification
     rows: Matrix
     moments: Moments
-    null_laws: NullLaws
+    table: NullTable | None
+
+    @property
+    def scale(self) -> Vector | None:
+        """Standard deviations of a unit: the reference's, else the batch's own."""
+        covariance = self.specification.sigma0 or self.moments.covariance
+        return None if covariance is None else covariance.scale
 
 
 @dataclass(frozen=True, slots=True)
@@ -72,11 +79,16 @@ class Finding:
         return "not-met" if self.result.p_value <= self.rule.level else "met"
 
     @property
-    def holds(self) -> bool:
-        """Whether this finding keeps the lot from being decided."""
+    def expected(self) -> bool:
+        """Whether the specification counts on the screen: all, but those that are made only when asked for."""
+        return self.rule.listed or self.name not in MADE_WHEN_ASKED
+
+    def holds(self, *, signs_decide: bool) -> bool:
+        """Return whether this finding keeps the lot from being decided, where sign flips can decide or not."""
         if self.state == "not-applicable":
             return self.rule.required
-        return self.state == "not-met" and self.rule.on_failure == "hold"
+        deferred = self.rule.on_failure == "sign-flip" and signs_decide
+        return self.state == "not-met" and self.rule.on_failure != "note" and not deferred
 
     def to_dict(self) -> dict[str, Any]:
         """Return the member of a record's ``screens``."""
@@ -109,3 +121,78 @@ def screen_completeness(batch: Batch, specification: Specification) -> Finding:
     """Return the finding of the one screen that can be made where values are missing."""
     rule = specification.screens["completeness"]
     return Finding("completeness", rule, completeness(batch, batch.rows, batch.names))
+
+
+def _completeness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return completeness(evidence.batch, evidence.rows, evidence.specification.names)
+
+
+def _against_specification(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    specification = evidence.specification
+    if specification.sigma0 is None:
+        return not_applicable("the specification has no reference covariance")
+    return outliers.against_specification(
+        evidence.moments, specification.sigma0, rule.level, specification.target_units
+    )
+
+
+def _within_batch(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return outliers.within_batch(evidence.moments, evidence.table, rule.level)
+
+
+def _resolution(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    scale = evidence.scale
+    if scale is None:
+        return not_applicable("there is no standard deviation to compare reporting steps with")
+    return resolution.resolution(evidence.rows, scale, evidence.specification.names)
+
+
+def _robust(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    if not rule.listed:
+        return not_applicable("the specification does not ask for it")
+    table = robust_table(evidence.moments.units, evidence.moments.dimension)
+    return robust.outlying(evidence.moments, table, rule.level)
+
+
+def _skewness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.skewness(evidence.moments, evidence.table)
+
+
+def _kurtosis(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.kurtosis(evidence.moments, evidence.table)
+
+
+def _henze_zirkler(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return normality.henze_zirkler(evidence.moments, evidence.table)
+
+
+def _margins(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return shapiro_wilk.margins(evidence.moments)
+
+
+def _dispersion(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    sigma0 = evidence.specification.sigma0
+    if sigma0 is None:
+        return not_applicable("the specification has no reference covariance")
+    return dispersion.against_reference(evidence.moments, sigma0, evidence.table, rule.level)
+
+
+def _order(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:
+    return ordering.order_dependence(evidence.moments, evidence.batch.sequence, evidence.table)
+
+
+_SCREENS: Mapping[str, Callable[[Evidence, ScreenRule], ScreenStatistic]] = MappingProxyType(
+    {
+        "completeness": _completeness,
+        "resolution": _resolution,
+        "outlying-against-specification": _against_specification,
+        "outlying-within-batch": _within_batch,
+        "outlying-robust": _robust,
+        "mardia-skewness": _skewness,
+        "mardia-kurtosis": _kurtosis,
+        "henze-zirkler": _henze_zirkler,
+        "marginal-normality": _margins,
+        "dispersion": _dispersion,
+        "order-dependence": _order,
+    }
+)

@@ -34,7 +34,13 @@ SCREEN_NAMES = (
 )
 """Every screen, in the order in which records list them."""
 
-# These two explain; they hold a lot only where the specification says so.
+JOINT_NORMALITY = frozenset({"mardia-skewness", "mardia-kurtosis", "henze-zirkler"})
+"""Screens whose failure a sign-flip test can answer."""
+
+MADE_WHEN_ASKED = frozenset({"outlying-robust"})
+"""Screens that cost more than all the others together, made only where the specification names them."""
+
+# These explain, and hold a lot only where the specification says so.
 _NOTED_BY_DEFAULT = frozenset({"marginal-normality", "resolution"})
 _SYMMETRY = 1e-12
 
@@ -63,7 +69,7 @@ class ScreenRule:
 
 @dataclass(frozen=True, slots=True)
 class Question:
-    """What is asked of the mean: is it different, or is it close enough?
+    """What is asked of the mean: whether it differs, or whether it is close enough.
 
     Parameters
     ----------
@@ -256,7 +262,16 @@ def _faults(data: Mapping[str, Any]) -> list[Fault]:
         elif not low <= item["target"] <= high:
             text = f"The target {item['target']:g} of {item['name']} lies outside its own bounds."
             faults.append(Fault(f"/characteristics/{j}/target", text, "target-out-of-bounds"))
-    return faults + _question_faults(data)
+    return faults + _question_faults(data) + _sign_flip_faults(data)
+
+
+def _sign_flip_faults(data: Mapping[str, Any]) -> list[Fault]:
+    text = "Sign flips answer doubts about joint normality only; give hold or note."
+    return [
+        Fault(f"/screens/{name}/on_failure", text, "sign-flip-not-here")
+        for name, settings in (data.get("screens") or {}).items()
+        if settings.get("on_failure") == "sign-flip" and name not in JOINT_NORMALITY
+    ]
 
 
 def _question_faults(data: Mapping[str, Any]) -> list[Fault]:

@@ -8,12 +8,13 @@ from flask import Flask, Response
 from jinja2 import StrictUndefined
 
 from service.config import Settings
-from service.http import decisions, problems, specifications, system
+from service.http import decisions, plans, problems, specifications, system
+from service.http.openapi import in_lines, in_words
 from service.http.routing import Operation
 from service.procedures.opening import open_site
 from service.procedures.site import Site
 
-SUBJECTS = (decisions.routes, specifications.routes, system.routes)
+SUBJECTS = (decisions.routes, specifications.routes, plans.routes, system.routes)
 
 OPERATIONS: tuple[Operation, ...] = tuple(operation for routes in SUBJECTS for operation in routes.operations)
 """Every operation of the interface, in the order in which its document lists them."""
@@ -40,6 +41,7 @@ def create_app(site: Site | None = None, settings: Settings | None = None) -> Fl
     settings = settings or Settings.from_environment(os.environ)
     app = Flask(__name__)
     app.jinja_env.undefined = StrictUndefined
+    app.jinja_env.filters.update(in_words=in_words, in_lines=in_lines)
     app.json.sort_keys = False  # type: ignore[attr-defined]
     # One byte more than the limit, so that a chunked body cut there is seen to be too large.
     app.config.update(BODY_LIMIT=settings.body_limit, MAX_CONTENT_LENGTH=settings.body_limit + 1)

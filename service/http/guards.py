@@ -24,6 +24,8 @@ def read_body() -> bytes:
         Where it is not declared as plain application/json.
     RequestEntityTooLarge
         Where it is larger than the limit, also when sent in chunks.
+    MalformedRequestError
+        Where the connection was cut before its end.
     """
     if request.mimetype != JSON:
         raise UnsupportedMediaType(f"Send the body as {JSON}; this one is {request.mimetype or 'of no declared type'}.")
@@ -37,6 +39,9 @@ def read_body() -> bytes:
     # A chunked body is cut silently at MAX_CONTENT_LENGTH, which is therefore one byte above the limit.
     if len(body) > limit:
         raise _too_large(limit)
+    announced = request.content_length
+    if announced is not None and len(body) != announced:
+        raise MalformedRequestError(f"The body ended after {len(body)} of the {announced} bytes announced.")
     return body
 
 

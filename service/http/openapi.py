@@ -5,9 +5,10 @@
 
 from __future__ import annotations
 
+import json
 import re
 import sys
-from collections.abc import Sequence
+from collections.abc import Callable, Mapping, Sequence
 from http import HTTPStatus
 from typing import Any
 
@@ -18,6 +19,7 @@ from marshmallow import Schema, fields
 
 from schemas import fields as own
 from schemas.decision import NamedOrWhole
+from schemas.plan import Shift
 from schemas.problem import ProblemSchema
 from schemas.specification import SpecificationReferenceSchema, SpecificationSchema
 from service import __version__
@@ -47,9 +49,8 @@ def document(operations: Sequence[Operation]) -> dict[str, Any]:
         servers=[{"url": "/", "description": "This service"}],
     )
     assert plugin.converter is not None
-    plugin.converter.add_attribute_function(_own_field)
+    plugin.converter.add_attribute_function(_own_field)  # type: ignore[no-untyped-call]
     spec.components.security_scheme("token", {"type": "http", "scheme": "bearer"})
-    spec.components.schema("Problem", schema=ProblemSchema)
     for status in sorted({status for operation in operations for status in operation.problems}):
         spec.components.response(f"Problem{status}", _problem_response(status))
     for operation in operations:
@@ -62,15 +63,15 @@ def to_yaml(described: dict[str, Any]) -> str:
     """Return the document as YAML, the same bytes every time and without anchors."""
 
     class Plain(yaml.SafeDumper):
-        def ignore_aliases(self, data: Any) -> bool:  # noqa: ARG002
+        def ignore_aliases(self, data: Any) -> bool:
             return True
 
     return yaml.dump(described, Dumper=Plain, sort_keys=False, allow_unicode=True, width=110)
 
 
-def _schema_name(schema: type[Schema] | Schema) -> str | None:
-    kind = schema if isinstance(schema, type) else type(schema)
-    return kind.__name__.removesuffix("Schema")
+def _schema_name(schema: type[Schema]) -> str:
+    # apispec hands over instances too.
+    return str(getattr(schema, "__name__", type(schema).__name__)).removesuffix("Schema")
 
 
 def _described(operation: Operation) -> dict[str, Any]:
@@ -116,40 +117,76 @@ def _response(status: int, shape: Schema | str) -> dict[str, Any]:
 def _problem_response(status: int) -> dict[str, Any]:
     return {
         "description": HTTPStatus(status).phrase,
-        "content": {"application/problem+json": {"schema": "Problem"}},
+        "content": {"application/problem+json": {"schema": ProblemSchema}},
     }
 
 
 def _own_field(self: Any, field: fields.Field[Any], **_: Any) -> dict[str, Any]:
-    """Describe the fields that are our own, and the bounds that JSON Schema has words for."""
-    number_or_null = {"type": ["number", "null"]}
-    match field:
-        case own.Number():
-            bounds = {
-                "exclusiveMinimum": field.above,
-                "exclusiveMaximum": field.below,
-                "minimum": field.least,
-                "maximum": field.most,
-            }
-            return {"type": "number"} | {name: bound for name, bound in bounds.items() if bound is not None}
-        case own.Matrix():
-            cell = number_or_null if field.missing_allowed else {"type": "number"}
-            row = {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_COLUMNS, "items": cell}
-            return {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_ROWS, "items": row}
-        case own.Sequence():
-            return {"type": "array", "minItems": 1, "items": {"type": ["number", "string"]}}
-        case own.Code():
-            return {"type": "string", "pattern": f"^{own.Code.PATTERN.pattern}$"}
-        case own.Text():
-            return {"type": "string", "minLength": 1, "maxLength": field.longest}
-        case own.Choice():
-            return {"type": "string", "enum": list(field.words)}
-        case own.Instant():
-            return {"type": "string", "format": "date-time"}
-        case NamedOrWhole():
-            shapes = (SpecificationReferenceSchema, SpecificationSchema)
-            return {"oneOf": [self.resolve_nested_schema(shape) for shape in shapes]}
+    """Describe the fields that are our own."""
+    if isinstance(field, NamedOrWhole):
+        shapes = (SpecificationReferenceSchema, SpecificationSchema)
+        return {"oneOf": [self.resolve_nested_schema(shape) for shape in shapes]}
+    for kind, describe in _OWN.items():
+        if isinstance(field, kind):
+            described: dict[str, Any] = describe(field)
+            return described
     return {}
+
+
+def _number(field: own.Number) -> dict[str, Any]:
+    bounds = {
+        "exclusiveMinimum": field.above,
+        "exclusiveMaximum": field.below,
+        "minimum": field.least,
+        "maximum": field.most,
+    }
+    return {"type": "number"} | {name: bound for name, bound in bounds.items() if bound is not None}
+
+
+def _matrix(field: own.Matrix) -> dict[str, Any]:
+    cell: dict[str, Any] = {"type": ["number", "null"] if field.missing_allowed else "number"}
+    row = {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_COLUMNS, "items": cell}
+    return {"type": "array", "minItems": 1, "maxItems": own.MAXIMUM_ROWS, "items": row}
+
+
+_OWN: dict[type[fields.Field[Any]], Callable[[Any], dict[str, Any]]] = {
+    own.Number: _number,
+    own.Matrix: _matrix,
+    own.Sequence: lambda _: {"type": "array", "minItems": 1, "items": {"type": ["number", "string"]}},
+    own.Code: lambda field: {"type": "string", "pattern": f"^{field.PATTERN.pattern}$"},
+    own.Text: lambda field: {"type": "string", "minLength": 1, "maxLength": field.longest},
+    own.Choice: lambda field: {"type": "string", "enum": list(field.words)},
+    Shift: lambda _: {
+        "oneOf": [{"type": "number", "minimum": 0}, {"type": "object", "additionalProperties": {"type": "number"}}]
+    },
+    own.Instant: lambda _: {"type": "string", "format": "date-time"},
+}
+"""From a field to its JSON Schema; the more special kinds first."""
+
+
+def in_words(shape: Mapping[str, Any]) -> str:
+    """Return a JSON Schema in a few words, for a page."""
+    if "$ref" in shape:
+        return str(shape["$ref"]).rsplit("/", 1)[-1]
+    if "oneOf" in shape:
+        return " or ".join(in_words(one) for one in shape["oneOf"])
+    if "anyOf" in shape:
+        return " or ".join(in_words(one) for one in shape["anyOf"])
+    if "enum" in shape:
+        return "one of: " + ", ".join(map(str, shape["enum"]))
+    kind = shape.get("type", "any")
+    if kind == "array":
+        return f"list of {in_words(shape.get('items', {}))}"
+    return " or ".join(kind) if isinstance(kind, list) else str(kind)
+
+
+_LIST_OF_SCALARS = re.compile(r"\[\s+([^\[\]{}]*?)\s+\]")
+
+
+def in_lines(example: object) -> str:
+    """Return an example as JSON for a page: members as written, each list of plain values on one line."""
+    text = json.dumps(example, indent=2, ensure_ascii=False)
+    return _LIST_OF_SCALARS.sub(lambda found: "[" + " ".join(found[1].split()) + "]", text)
 
 
 if __name__ == "__main__":

@@ -86,8 +86,16 @@ class Routes:
 
         def declare(view: View) -> View:
             summary, _, description = (view.__doc__ or "").strip().partition("\n")
-            words = {"summary": summary.rstrip("."), "description": " ".join(description.split())}
-            self.operations.append(Operation(rule=rule, method=method, view=view, tag=self.tag, **words, **declared))
+            operation = Operation(
+                rule=rule,
+                method=method,
+                view=view,
+                tag=self.tag,
+                summary=summary.rstrip("."),
+                description=" ".join(description.split()),
+                **declared,
+            )
+            self.operations.append(operation)
             return view
 
         return declare

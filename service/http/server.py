@@ -37,7 +37,7 @@ def settings_for(workers: int) -> dict[str, Any]:
     }
 
 
-class Server(BaseApplication):
+class Server(BaseApplication):  # type: ignore[misc]
     """The service under gunicorn; each worker opens store and key for itself, after the fork."""
 
     def __init__(self, options: Mapping[str, Any]) -> None:
@@ -73,11 +73,12 @@ def run(host: str, port: int, workers: int) -> None:
     ServiceError
         Where the site cannot be opened; said before any worker starts.
     """
+    # One BLAS thread a worker: matrices are small, and threads would only compete for cores.  It counts
+    # only where it is said before numpy is loaded, which the next imports do.
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     from service.config import Settings
     from service.procedures.opening import open_site
 
-    # One BLAS thread a worker: matrices are small, and threads would only compete for cores.
-    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
     open_site(Settings.from_environment(os.environ)).store.close()
     port = port or _free_port(host)
     print(f"Listening on http://{host}:{port}", flush=True)  # noqa: T201 - the one line that a starter waits for

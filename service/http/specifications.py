@@ -54,7 +54,7 @@ def draft_specification(site: Site, actor: Actor, body: dict[str, Any], received
     headers=_IF_MATCH,
 )
 def approve_specification(
-    site: Site, actor: Actor, code: str, version: int, body: dict[str, Any], received: Received
+    site: Site, actor: Actor, code: str, version: int, *, body: dict[str, Any], received: Received
 ) -> Response:
     """Approve a draft, so that it governs from its effective time.
 
@@ -75,7 +75,7 @@ def approve_specification(
     headers=_IF_MATCH,
 )
 def withdraw_specification(
-    site: Site, actor: Actor, code: str, version: int, body: dict[str, Any], received: Received
+    site: Site, actor: Actor, code: str, version: int, *, body: dict[str, Any], received: Received
 ) -> Response:
     """Withdraw a version, so that it decides nothing any more.
 

@@ -12,25 +12,23 @@ from service.http.routing import Operation, Routes
 from service.procedures.site import Site
 from service.signing import keys
 
-routes = Routes("System")
-
-_OPEN = {"public": True}
+routes: Routes = Routes("System")
 
 
-@routes.route("/livez", **_OPEN, answers={200: "text/plain"})
+@routes.route("/livez", public=True, answers={200: "text/plain"})
 def live(site: Site) -> Response:
     """Say that the process answers."""
     return Response("live\n", mimetype="text/plain")
 
 
-@routes.route("/readyz", **_OPEN, answers={200: "text/plain"}, problems=(503,))
+@routes.route("/readyz", public=True, answers={200: "text/plain"}, problems=(503,))
 def ready(site: Site) -> Response:
     """Say that store and key can be used."""
     site.store.ping()
     return Response("ready\n", mimetype="text/plain")
 
 
-@routes.route("/.well-known/jwks.json", **_OPEN, answers={200: "application/json"})
+@routes.route("/.well-known/jwks.json", public=True, answers={200: "application/json"})
 def public_keys(site: Site) -> Response:
     """Give the public keys that records are signed with (RFC 7517).
 
@@ -39,19 +37,19 @@ def public_keys(site: Site) -> Response:
     return answers.plain(keys.jwks(site.trusted.values()))
 
 
-@routes.route("/openapi.yaml", **_OPEN, answers={200: "application/yaml"})
+@routes.route("/openapi.yaml", public=True, answers={200: "application/yaml"})
 def interface_yaml(site: Site) -> Response:
     """Give the interface's document as YAML."""
     return Response(_yaml(), mimetype="application/yaml")
 
 
-@routes.route("/openapi.json", **_OPEN, answers={200: "application/json"})
+@routes.route("/openapi.json", public=True, answers={200: "application/json"})
 def interface_json(site: Site) -> Response:
     """Give the interface's document as JSON."""
     return answers.plain(document(_operations()))
 
 
-@routes.route("/docs", **_OPEN, answers={200: "text/html"})
+@routes.route("/docs", public=True, answers={200: "text/html"})
 def interface_page(site: Site) -> Response:
     """Show the interface to people; needs neither scripts nor the internet."""
     return Response(render_template("docs.html", interface=document(_operations())), mimetype="text/html")

@@ -76,11 +76,11 @@ def decide_batch(
         earlier = None if key is None else _replay(tx.replay(key), received)
         if earlier is not None:
             return Answer(earlier, replayed=True)
-        return Answer(_record(site, tx, actor, judgement, received, key), replayed=False)
+        return Answer(_record(site, tx, actor, judgement, received=received, key=key), replayed=False)
 
 
 def _record(
-    site: Site, tx: Transaction, actor: Actor, judgement: Judgement, received: Received, key: str | None
+    site: Site, tx: Transaction, actor: Actor, judgement: Judgement, *, received: Received, key: str | None
 ) -> str:
     """Compose, sign and add the record, with its number of attempts counted under the same lock."""
     heading = site.heading(actor, "submitter")

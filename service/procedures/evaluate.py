@@ -120,6 +120,23 @@ def find_specification(site: Site, wanted: Mapping[str, Any]) -> tuple[Specifica
         return registered_specification(site, view, row), row.version
 
 
+def any_specification(site: Site, wanted: Mapping[str, Any]) -> tuple[Specification, int | None]:
+    """Return a specification that is to be studied, not decided by: whole, or any version, drafts too.
+
+    Raises
+    ------
+    NotFoundError
+        Where there is no such version.
+    """
+    if "characteristics" in wanted:
+        return Specification.from_dict(wanted), None
+    with site.store.reading() as view:
+        rows = [row for row in view.versions(wanted["code"]) if wanted.get("version") in (None, row.version)]
+        if not rows:
+            raise NotFoundError(f"There is no such version of a specification {wanted['code']!r}.").at("/code")
+        return registered_specification(site, view, rows[-1]), rows[-1].version
+
+
 def governing_version(view: View, code: str, version: int | None, at: str) -> VersionRow:
     """Return the approved version of a specification that governs at a time.
 

@@ -125,7 +125,7 @@ def approve(site: Site, actor: Actor, step: Step) -> str:
             why=step.reason,
             signature=record.signature(heading, "approval", ["token"]),
         )
-        return _event(site, tx, heading, row, payload, effective_at)
+        return _event(site, tx, heading, row, payload)
 
 
 def withdraw(site: Site, actor: Actor, step: Step) -> str:
@@ -160,17 +160,15 @@ def withdraw(site: Site, actor: Actor, step: Step) -> str:
             why=step.reason,
             signature=record.signature(heading, "responsibility", ["token"]),
         )
-        return _event(site, tx, heading, row, payload, None)
+        return _event(site, tx, heading, row, payload)
 
 
-def _event(
-    site: Site, tx: Transaction, heading: Heading, row: VersionRow, payload: Mapping[str, Any], effective_at: str | None
-) -> str:
+def _event(site: Site, tx: Transaction, heading: Heading, row: VersionRow, payload: Mapping[str, Any]) -> str:
     record_type = str(payload["record_type"])
     envelope = sign(payload, site.signer)
     kept = tx.add_record(envelope, _columns(heading, record_type, row.code, row.version))
     state = record_type.removeprefix("specification-")
-    after = replace(row, record=kept, state=state, effective_at=effective_at)
+    after = replace(row, record=kept, state=state, effective_at=payload.get("effective_at"))
     tx.add_specification_event(after, heading.actor["subject"])
     return envelope
 

@@ -9,7 +9,7 @@ from collections.abc import Sequence
 from datetime import timedelta
 
 from service.domain import record
-from service.domain.actor import ROLES, Actor, Role
+from service.domain.actor import ROLES, Actor
 from service.domain.record import instant
 from service.errors import ConfigurationError, NotFoundError, UnauthenticatedError
 from service.procedures.site import Site
@@ -22,7 +22,7 @@ OPERATOR = Actor("operator at the console", frozenset({"operator"}), "account on
 """Whoever may read the key file can act as operator on the command line."""
 
 
-def issue(site: Site, actor: Actor, subject: str, roles: Sequence[Role], days: int | None = None) -> str:
+def issue(site: Site, actor: Actor, subject: str, roles: Sequence[str], days: int | None = None) -> str:
     """Issue a token; the text returned is shown once and not kept.
 
     Parameters
@@ -33,7 +33,7 @@ def issue(site: Site, actor: Actor, subject: str, roles: Sequence[Role], days: i
         An operator.
     subject : str
         The person or machine that the token speaks for.
-    roles : sequence of Role
+    roles : sequence of str
         What it may do.
     days : int, optional
         After how many days it expires; never where left out.

@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 
 from sqlalchemy import Connection, Engine, insert, text
-from sqlalchemy.exc import SQLAlchemyError
+from sqlalchemy.exc import DataError, DBAPIError, IntegrityError, NotSupportedError, ProgrammingError, TimeoutError
 
 from service.errors import StoreUnavailableError
 from service.storage import engine, schema
@@ -17,6 +17,9 @@ from service.storage.rows import Columns, Filters, Received, RecordRow, TokenRow
 from service.storage.view import View
 
 __all__ = ["Columns", "Filters", "Received", "RecordRow", "Store", "TokenRow", "Transaction", "VersionRow", "View"]
+
+# These say that a question was wrong, not that the store is away.
+_FAULTS_OF_THIS_PROGRAM = (IntegrityError, ProgrammingError, DataError, NotSupportedError)
 
 # Envelopes and bodies compress well already at the fastest setting.
 _COMPRESSION = 1
@@ -142,10 +145,14 @@ class Store:
         """
         with _unavailable("opened"):
             store = cls(engine.writing_engine(url), engine.reading_engine(url))
-            engine.check_durability(store._writer)
-            with store._writer.connect() as connection:
-                schema.check(connection)
-            engine.sync_folder(url)
+            try:
+                engine.check_durability(store._writer)
+                with store._writer.connect() as connection:
+                    schema.check(connection)
+                engine.sync_folder(url)
+            except BaseException:
+                store.close()
+                raise
         return store
 
     @staticmethod
@@ -220,6 +227,8 @@ def _serialise(connection: Connection) -> None:
 def _unavailable(done: str) -> Iterator[None]:
     try:
         yield
-    except (SQLAlchemyError, OSError) as error:
+    except _FAULTS_OF_THIS_PROGRAM:
+        raise
+    except (DBAPIError, TimeoutError, OSError) as error:
         cause = getattr(error, "orig", None) or error
         raise StoreUnavailableError(f"The store cannot be {done} now: {cause}") from error

@@ -7,7 +7,7 @@ import json
 from collections.abc import Sequence
 from typing import Any
 
-from sqlalchemy import Connection, Row, Select, and_, exists, func, select
+from sqlalchemy import ColumnElement, Connection, Row, Select, and_, exists, func, select
 
 from service.storage import tables as t
 from service.storage.rows import Filters, RecordRow, TokenRow, VersionRow
@@ -49,17 +49,21 @@ class View:
     def records(self, filters: Filters) -> list[RecordRow]:
         """Return decisions that the filters let through, newest first, one more than the limit where there are more."""
         c = t.record.c
-        wanted = [
-            (c.id < filters.before, filters.before),
-            (c.lot == filters.lot, filters.lot),
-            (c.specification_code == filters.specification, filters.specification),
-            (c.outcome == filters.outcome, filters.outcome),
-            (c.actor == filters.actor, filters.actor),
-            (c.recorded_at >= filters.decided_from, filters.decided_from),
-            (c.recorded_at < filters.decided_to, filters.decided_to),
-            (_has_reason(filters.reason), filters.reason),
-        ]
-        conditions = [condition for condition, value in wanted if value is not None]
+        equal = {
+            c.lot: filters.lot,
+            c.specification_code: filters.specification,
+            c.outcome: filters.outcome,
+            c.actor: filters.actor,
+        }
+        conditions = [column == value for column, value in equal.items() if value is not None]
+        if filters.before is not None:
+            conditions.append(c.id < filters.before)
+        if filters.decided_from is not None:
+            conditions.append(c.recorded_at >= filters.decided_from)
+        if filters.decided_to is not None:
+            conditions.append(c.recorded_at < filters.decided_to)
+        if filters.reason is not None:
+            conditions.append(_has_reason(filters.reason))
         query = select(*_RECORD_COLUMNS).where(c.record_type == "decision", *conditions)
         rows = self._connection.execute(query.order_by(c.id.desc()).limit(filters.limit + 1))
         return [_record(row) for row in rows]
@@ -158,7 +162,7 @@ def _record(row: Sequence[Any]) -> RecordRow:
     return RecordRow(*row)
 
 
-def _has_reason(code: str | None) -> Any:
+def _has_reason(code: str) -> ColumnElement[bool]:
     return exists().where(t.record_reason.c.record == t.record.c.id, t.record_reason.c.code == code)
 
 
