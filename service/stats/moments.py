@@ -13,6 +13,8 @@ from service.stats.covariance import Covariance, factor_covariance
 
 Obstacle = TooFewUnitsError | NotPositiveDefiniteError | IllConditionedError
 
+_ROUNDING = 8 * np.finfo(np.float64).eps
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Moments:
@@ -90,16 +92,23 @@ def sample_moments(x: Matrix, mu0: Vector) -> Moments:
         nothing = TooFewUnitsError("One unit has no sample covariance.")
         return Moments(deviations, difference, centred, np.full((p, p), math.nan), None, None, nothing)
     scatter = centred.T @ centred / (n - 1)
-    covariance, obstacle = _factored(scatter, n)
+    covariance, obstacle = _factored(scatter, n, x[0])
     whitened = None if covariance is None else covariance.whiten(centred)
     return Moments(deviations, difference, centred, scatter, covariance, whitened, obstacle)
 
 
-def _factored(scatter: Matrix, n: int) -> tuple[Covariance | None, Obstacle | None]:
+def _factored(scatter: Matrix, n: int, unit: Vector) -> tuple[Covariance | None, Obstacle | None]:
     p = scatter.shape[0]
     if n <= p:
         return None, TooFewUnitsError(
             f"The sample covariance of {p} characteristics needs at least {p + 1} units; the batch has {n}."
+        )
+    # What is left of a constant after rounding, as in means of replicates, is no spread.
+    constant = np.sqrt(np.diagonal(scatter)) <= _ROUNDING * np.abs(unit)
+    if constant.any():
+        j = int(constant.argmax())
+        return None, NotPositiveDefiniteError(
+            f"The sample covariance cannot be used. Characteristic {j + 1} is constant in this batch."
         )
     try:
         return factor_covariance(scatter, n - 1.0), None

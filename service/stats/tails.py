@@ -1,32 +1,41 @@
 """Upper tail probabilities and critical values, with logarithms that never underflow.
 
-Ordinary tails come from the survival functions of `scipy.special`.  Where they
-underflow, the logarithm comes from the continued fraction of the same tail, so
-that ``log10_p_value`` still stands where ``p_value`` is 0.
+Ordinary tails come from the complementary functions of `scipy.special`, and the
+logarithm from whichever tail is the smaller.  Near underflow both come from the
+continued fraction of the same tail, so that ``log10_p_value`` still stands where
+``p_value`` is 0.
 
 References
 ----------
 .. [1] NIST Digital Library of Mathematical Functions, 8.9.2 (incomplete gamma
-   function) and 8.17.22 (incomplete beta function): continued fractions.
+   function): continued fraction.
 .. [2] W. J. Lentz, "Generating Bessel functions in Mie scattering calculations
    using continued fractions", Applied Optics 15 (1976) 668-671: the evaluation.
+.. [3] A. R. Didonato and A. H. Morris, "Algorithm 708: significant digit computation
+   of the incomplete beta function ratios", ACM Transactions on Mathematical
+   Software 18 (1992) 360-373: continued fraction, without cancellation.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable
 from typing import NamedTuple
 
 import numpy as np
 from scipy import special
 
 from service.stats.arrays import Vector
+from service.stats.roots import increasing_root
 
 _LN10 = math.log(10.0)
-# Below this the survival functions lose digits to gradual underflow.
-_SMALLEST_TRUSTED = 1e-290
+# Below this the survival functions lose digits to gradual underflow of what they multiply.
+_SMALLEST_TRUSTED = 1e-200
+# Where the inverse of the incomplete beta function can return NaN or too few digits.
+_SMALLEST_INVERTED, _LARGEST_INVERTED_DOF = 1e-100, 1e6
+_LARGEST_LOG = 709.0
 _TINY = 1e-300
+_CONVERGED, _MOST_TERMS = 5e-16, 100_000
 
 
 class Tail(NamedTuple):
@@ -36,51 +45,44 @@ class Tail(NamedTuple):
     log10_p_value: float
 
 
-def _log10(upper: float, lower: float) -> float:
-    """Return log10 of the upper tail from whichever tail is the smaller."""
-    return math.log10(upper) if upper <= 0.5 else math.log1p(-lower) / _LN10
+def _from_logarithm(log_p: float) -> Tail:
+    return Tail(math.exp(log_p), log_p / _LN10)
 
 
-def _lentz(first: float, terms: Iterable[tuple[float, float]]) -> float:
-    """Return the continued fraction first + a1/(b1 + a2/(b2 + ...)) by Lentz's method."""
+def _lentz(first: float, term: Callable[[int], tuple[float, float]]) -> float:
+    """Return the continued fraction first + a1/(b1 + a2/(b2 + ...)) by Lentz's method, (am, bm) being term(m)."""
     value = first or _TINY
-    c, d = value, 0.0
-    for a, b in terms:
+    c, d, step, m = value, 0.0, math.inf, 0
+    # Two units in the last place: rounding may never let a step be 1 exactly.
+    while abs(step - 1.0) > _CONVERGED and m < _MOST_TERMS:
+        m += 1
+        a, b = term(m)
         d = 1.0 / (b + a * d or _TINY)
         c = b + a / c or _TINY
         step = c * d
         value *= step
-        if abs(step - 1.0) < 1e-16:
-            break
     return value
-
-
-def _gamma_terms(a: float, x: float) -> Iterator[tuple[float, float]]:
-    for i in range(1, 100_000):
-        yield -i * (i - a), x + 2 * i + 1 - a
 
 
 def _log_gamma_upper(a: float, x: float) -> float:
     """Return ln Q(a, x), the regularised upper incomplete gamma function (DLMF 8.9.2)."""
-    fraction = _lentz(x + 1 - a, _gamma_terms(a, x))
+    fraction = _lentz(x + 1 - a, lambda m: (-m * (m - a), x + 2 * m + 1 - a))
     return a * math.log(x) - x - float(special.gammaln(a)) - math.log(fraction)
 
 
-def _beta_terms(a: float, b: float, x: float) -> Iterator[tuple[float, float]]:
-    for m in range(100_000):
-        even = m * (b - m) * x / ((a + 2 * m - 1) * (a + 2 * m)) if m else 1.0
-        odd = -(a + m) * (a + b + m) * x / ((a + 2 * m) * (a + 2 * m + 1))
-        if m:
-            yield even, 1.0
-        yield odd, 1.0
-
-
 def _log_beta_lower(a: float, b: float, log_x: float) -> float:
-    """Return ln I_x(a, b), the regularised incomplete beta function (DLMF 8.17.22)."""
-    x = math.exp(log_x)
-    fraction = _lentz(1.0, _beta_terms(a, b, x))
-    front = a * log_x + b * math.log1p(-x) - math.log(a) - float(special.betaln(a, b))
-    return front - math.log(fraction)
+    """Return ln I_x(a, b), the regularised incomplete beta function, where x is below the mean."""
+    # Both x and its complement to 1 to full precision, as a may be many orders above b.
+    x, y = math.exp(log_x), -math.expm1(log_x)
+    gap = a * y - b * x + 1
+
+    def term(m: int) -> tuple[float, float]:
+        middle = a + 2 * m
+        above = (a + m - 1) * (a + b + m - 1) * m * (b - m) * (x / (middle - 1)) ** 2
+        return above, m + m * (b - m) * x / (middle - 1) + (a + m) / (middle + 1) * (gap + m * (1 + y))
+
+    fraction = _lentz(a / (a + 1) * gap, term)
+    return a * log_x + b * math.log(y) - float(special.betaln(a, b)) - math.log(fraction)
 
 
 def chi_square_tail(x: float, dof: float) -> Tail:
@@ -100,8 +102,10 @@ def chi_square_tail(x: float, dof: float) -> Tail:
     """
     upper = float(special.chdtrc(dof, x))
     if upper < _SMALLEST_TRUSTED:
-        return Tail(upper, _log_gamma_upper(dof / 2, x / 2) / _LN10)
-    return Tail(upper, _log10(upper, float(special.chdtr(dof, x))))
+        return _from_logarithm(_log_gamma_upper(dof / 2, x / 2))
+    if upper <= 0.5:
+        return Tail(upper, math.log10(upper))
+    return Tail(upper, math.log1p(-float(special.chdtr(dof, x))) / _LN10)
 
 
 def f_tail(x: float, dof1: float, dof2: float) -> Tail:
@@ -119,11 +123,21 @@ def f_tail(x: float, dof1: float, dof2: float) -> Tail:
     Tail
         The probability and its decimal logarithm.
     """
-    upper = float(special.fdtrc(dof1, dof2, x))
+    return _ratio_tail(x * (dof1 / dof2), dof1, dof2)
+
+
+def _ratio_tail(ratio: float, dof1: float, dof2: float) -> Tail:
+    """Return the upper tail of the ratio of two independent chi-squares, not divided by their dof."""
+    a, b, small = dof1 / 2, dof2 / 2, ratio < 1.0
+    # Of the two arguments of the beta law the one that is not near 1 carries all the digits.
+    share = ratio / (1.0 + ratio) if small else 1.0 / (1.0 + ratio)
+    upper = float(special.betaincc(a, b, share) if small else special.betainc(b, a, share))
     if upper < _SMALLEST_TRUSTED:
-        log_x = -math.log1p(dof1 * x / dof2)
-        return Tail(upper, _log_beta_lower(dof2 / 2, dof1 / 2, log_x) / _LN10)
-    return Tail(upper, _log10(upper, float(special.fdtr(dof1, dof2, x))))
+        return _from_logarithm(_log_beta_lower(b, a, -math.log1p(ratio)))
+    if upper <= 0.5:
+        return Tail(upper, math.log10(upper))
+    lower = float(special.betainc(a, b, share) if small else special.betaincc(b, a, share))
+    return Tail(upper, math.log1p(-lower) / _LN10)
 
 
 def t_two_sided(t: Vector, dof: float) -> Vector:
@@ -214,7 +228,19 @@ def chi_square_critical(level: float, dof: float) -> float:
 
 
 def f_critical(level: float, dof1: float, dof2: float) -> float:
-    """Return x with P(F > x) = `level`, from both tails of the beta law so that no digit cancels."""
+    """Return x with P(F > x) = `level`; infinite where it nears the largest float."""
+    if level < _SMALLEST_INVERTED or dof2 > _LARGEST_INVERTED_DOF:
+        return _searched_f_critical(level, dof1, dof2)
+    # From both tails of the beta law, so that no digit cancels.
     x = float(special.betaincinv(dof2 / 2, dof1 / 2, level))
     y = float(special.betainccinv(dof1 / 2, dof2 / 2, level))
     return dof2 * y / (dof1 * x)
+
+
+def _searched_f_critical(level: float, dof1: float, dof2: float) -> float:
+    """Return the critical value as the root of the tail's logarithm over that of the ratio."""
+    wanted = math.log10(level)
+    log_ratio = increasing_root(
+        lambda s: wanted - _ratio_tail(math.exp(s), dof1, dof2).log10_p_value, -_LARGEST_LOG, _LARGEST_LOG
+    )
+    return math.exp(log_ratio) * (dof2 / dof1) if log_ratio < _LARGEST_LOG else math.inf
