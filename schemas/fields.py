@@ -14,6 +14,11 @@ from marshmallow import ValidationError, fields
 MAXIMUM_ROWS = 10_000
 MAXIMUM_COLUMNS = 100
 
+LARGEST = 1e100
+"""No measured value is larger in size; squares of larger ones would leave the range of a double."""
+
+_NO_NUMBER = f"Give a finite number of at most {LARGEST:g} in size, without quotes."
+
 _INSTANT = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|[+-]\d\d:\d\d)")
 
 
@@ -43,7 +48,7 @@ class Number(fields.Field[float]):
     def _deserialize(self, value: Any, attr: str | None, data: Mapping[str, Any] | None, **options: Any) -> float:
         number = as_number(value)
         if number is None:
-            raise ValidationError("Give a finite number, without quotes.")
+            raise ValidationError(_NO_NUMBER)
         if self.above is not None and not number > self.above:
             raise ValidationError(f"Give a number greater than {self.above:g}.")
         if self.below is not None and not number < self.below:
@@ -60,8 +65,12 @@ def as_number(value: object) -> float | None:
     # bool is an int to Python, but true is no number to JSON.
     if type(value) is float or type(value) is int:
         number = float(value) + 0.0
-        return number if math.isfinite(number) else None
+        return number if abs(number) <= LARGEST else None
     return None
+
+
+def _in_range(table: list[list[float]]) -> bool:
+    return min(map(min, table)) >= -LARGEST and max(map(max, table)) <= LARGEST
 
 
 class Count(fields.Integer):
@@ -202,8 +211,8 @@ class Matrix(fields.Field[list[list[float | None]]]):
         plain = all(type(row) is list and len(row) == width and set(map(type, row)) <= {float, int} for row in value)
         if plain:
             table = [[cell + 0.0 for cell in row] for row in value]
-            # The sum of finite cells is finite, or at least one cell is very large; then look at each.
-            if math.isfinite(sum(map(sum, table))):
+            # A sum that is no number says that a cell is none; then look at each.
+            if not math.isnan(sum(map(sum, table))) and _in_range(table):
                 return table
         return self._cell_by_cell(value, width)
 
@@ -231,4 +240,4 @@ class Matrix(fields.Field[list[list[float | None]]]):
         if isinstance(cell, dict):
             return "Results below or above a limit are not taken here; give a number."
         number = as_number(cell)
-        return "Give a finite number, without quotes." if number is None else number
+        return _NO_NUMBER if number is None else number

@@ -10,6 +10,9 @@ from marshmallow.validate import Length
 from schemas.base import Shape
 from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, Matrix, Number, Text
 
+SMALLEST_LEVEL = 1e-12
+"""Below this a level cannot be told from never rejecting, and critical values leave the range of a double."""
+
 SCREENS = (
     "completeness",
     "resolution",
@@ -97,7 +100,7 @@ class QuestionSchema(Shape):
 class ScreenSchema(Shape):
     """How one screen is applied."""
 
-    level = Number(above=0, most=0.5)
+    level = Number(least=SMALLEST_LEVEL, most=0.5)
     on_failure = Choice("hold", "note", "sign-flip")
     required = Flag()
 
@@ -111,7 +114,7 @@ class SpecificationSchema(Shape):
         fields.Nested(CharacteristicSchema), required=True, validate=Length(1, MAXIMUM_COLUMNS)
     )
     covariance = fields.Nested(CovarianceSchema, required=True)
-    significance_level = Number(required=True, above=0, most=0.5)
+    significance_level = Number(required=True, least=SMALLEST_LEVEL, most=0.5)
     question = fields.Nested(QuestionSchema, required=True)
     screens = fields.Nested(Shape.from_dict({name: fields.Nested(ScreenSchema) for name in SCREENS}, name="Screens"))
     missing = Choice("refuse", "hold")
