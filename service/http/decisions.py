@@ -98,7 +98,7 @@ def list_decisions(site: Site, actor: Actor, query: dict[str, Any]) -> Response:
     "/v1/decisions/<record_id>",
     roles=_READERS,
     answers={200: RecordSchema()},
-    problems=(401, 403, 404, 406, 503),
+    problems=(400, 401, 403, 404, 406, 503),
 )
 def read_decision(site: Site, actor: Actor, record_id: str) -> Response:
     """Read a decision record.
@@ -113,7 +113,7 @@ def read_decision(site: Site, actor: Actor, record_id: str) -> Response:
     "/v1/decisions/<record_id>/bundle",
     roles=_READERS,
     answers={200: BundleSchema()},
-    problems=(401, 403, 404, 503),
+    problems=(400, 401, 403, 404, 503),
 )
 def read_bundle(site: Site, actor: Actor, record_id: str) -> Response:
     """Take everything that `acceptance verify` needs, but the trusted key."""

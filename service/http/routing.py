@@ -12,7 +12,7 @@ from marshmallow import Schema
 
 from service.domain.actor import Actor, Role
 from service.errors import NotPermittedError
-from service.http.guards import load_body, load_query, read_body
+from service.http.guards import load_body, load_query, read_body, refuse_query, refuse_unreadable
 from service.procedures.site import Site
 from service.procedures.tokens import recognise
 from service.storage.store import Received
@@ -114,10 +114,14 @@ def site() -> Site:
 
 def _answer(operation: Operation, **given: Any) -> Response:
     """Establish who asks and what, each in its turn, and call the view."""
+    parameters = tuple(given.values())
     if operation.roles:
         given["actor"] = _permitted(operation)
+        refuse_unreadable(parameters)
     if operation.query is not None:
         given["query"] = load_query(operation.query)
+    elif operation.roles:
+        refuse_query()
     if operation.body is not None:
         body = read_body()
         given["body"] = load_body(body, operation.body)
