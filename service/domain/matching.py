@@ -33,11 +33,12 @@ def matched_rows(batch: Batch, specification: Specification) -> Matrix:
         measurement, a value outside the declared bounds, a missing cell where
         the specification refuses them.
     """
-    columns = {name: j for j, name in enumerate(batch.names)}
-    refuse_any(_name_faults(batch, specification) + _unit_faults(batch, specification), "batch")
-    rows = frozen(batch.rows[:, [columns[name] for name in specification.names]])
+    rows = batch.rows
+    if batch.names != specification.names or batch.measurement_units != specification.measurement_units:
+        refuse_any(_name_faults(batch, specification) + _unit_faults(batch, specification), "batch")
+        rows = frozen(rows[:, [batch.names.index(name) for name in specification.names]])
     faults = _bound_faults(rows, batch, specification)
-    if specification.missing == "refuse":
+    if batch.missing and specification.missing == "refuse":
         faults += _missing_faults(batch)
     refuse_any(faults, "batch")
     return rows

@@ -63,20 +63,22 @@ class Finding:
         Level, and what a failure does.
     result : ScreenStatistic
         What was computed.
+    state : {"met", "not-met", "not-applicable"}
+        One without a p-value is met where it found nothing.
     """
 
     name: str
     rule: ScreenRule
     result: ScreenStatistic
+    state: State
 
-    @property
-    def state(self) -> State:
-        """Whether the screen is met; one without a p-value is met where it found nothing."""
-        if not self.result.applicable:
-            return "not-applicable"
-        if self.result.p_value is None:
-            return "not-met" if self.result.statistic else "met"
-        return "not-met" if self.result.p_value <= self.rule.level else "met"
+    @classmethod
+    def of(cls, name: str, rule: ScreenRule, result: ScreenStatistic) -> Finding:
+        """Return the finding of a screen, its state by its rule."""
+        if not result.applicable:
+            return cls(name, rule, result, "not-applicable")
+        failed = bool(result.statistic) if result.p_value is None else result.p_value <= rule.level
+        return cls(name, rule, result, "not-met" if failed else "met")
 
     @property
     def expected(self) -> bool:
@@ -114,13 +116,13 @@ class Finding:
 def screen_all(evidence: Evidence) -> tuple[Finding, ...]:
     """Return the finding of every screen, in the order of `SCREEN_NAMES`."""
     rules = evidence.specification.screens
-    return tuple(Finding(name, rules[name], _SCREENS[name](evidence, rules[name])) for name in SCREEN_NAMES)
+    return tuple(Finding.of(name, rules[name], _SCREENS[name](evidence, rules[name])) for name in SCREEN_NAMES)
 
 
 def screen_completeness(batch: Batch, specification: Specification) -> Finding:
     """Return the finding of the one screen that can be made where values are missing."""
     rule = specification.screens["completeness"]
-    return Finding("completeness", rule, completeness(batch, batch.rows, batch.names))
+    return Finding.of("completeness", rule, completeness(batch, batch.rows, batch.names))
 
 
 def _completeness(evidence: Evidence, rule: ScreenRule) -> ScreenStatistic:

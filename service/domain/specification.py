@@ -228,7 +228,7 @@ def _covariance(data: Mapping[str, Any], p: int) -> tuple[Covariance | None, lis
     if faults:
         return None, faults
     try:
-        return factor_covariance((matrix + matrix.T) / 2, dof), []
+        return factor_covariance((matrix + matrix.T) / 2, dof, lasting=True), []
     except (NotPositiveDefiniteError, IllConditionedError) as error:
         return None, [Fault("/covariance/matrix", error.detail, error.code)]
 

@@ -3,14 +3,21 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Callable, Hashable
+from dataclasses import dataclass, field
 from functools import cached_property
+from typing import Any, TypeVar
 
 import numpy as np
 from scipy.linalg import lapack
 
 from service.errors import IllConditionedError, NotPositiveDefiniteError
 from service.stats.arrays import Matrix, Vector, frozen
+
+T = TypeVar("T")
+
+# Different numbers of units and levels that one covariance meets; beyond, all is made anew.
+_MOST_KEPT = 256
 
 REFUSED_BELOW = 1e-12
 """Reciprocal condition number of the correlation form below which a covariance is refused."""
@@ -33,12 +40,16 @@ class Covariance:
         Degrees of freedom of the estimate; infinite where the covariance is known.
     reciprocal_condition : float
         Reciprocal condition number of the correlation matrix in the 1-norm.
+    lasting : bool
+        Whether many batches will be judged by it, so that what follows from it alone is worth keeping.
     """
 
     scale: Vector
     factor: Matrix
     degrees_of_freedom: float
     reciprocal_condition: float
+    lasting: bool = False
+    _kept: dict[Hashable, Any] = field(default_factory=dict, init=False, repr=False)
 
     @property
     def dimension(self) -> int:
@@ -54,6 +65,17 @@ class Covariance:
     def matrix(self) -> Matrix:
         """The covariance matrix, shape (p, p)."""
         return frozen(self.correlation * np.outer(self.scale, self.scale))
+
+    def keep(self, key: Hashable, make: Callable[[], T]) -> T:
+        """Return what `make` computes from this covariance alone: once for a lasting one, else every time."""
+        if not self.lasting:
+            return make()
+        if key not in self._kept:
+            if len(self._kept) >= _MOST_KEPT:
+                self._kept.clear()
+            self._kept[key] = make()
+        kept: T = self._kept[key]
+        return kept
 
     def whiten(self, deviations: Matrix) -> Matrix:
         """Return ``L^-1 D^-1 y`` for each row y, so that the rows have unit covariance.
@@ -93,7 +115,7 @@ class Covariance:
         return np.asarray(np.einsum("ij,ij->i", whitened, whitened))
 
 
-def factor_covariance(matrix: Matrix, degrees_of_freedom: float = math.inf) -> Covariance:
+def factor_covariance(matrix: Matrix, degrees_of_freedom: float = math.inf, *, lasting: bool = False) -> Covariance:
     """Factor a covariance matrix, or refuse it by name.
 
     The matrix is brought to correlation form first, so that neither the factor
@@ -105,6 +127,8 @@ def factor_covariance(matrix: Matrix, degrees_of_freedom: float = math.inf) -> C
         Symmetric covariance, in products of units of measurement.
     degrees_of_freedom : float, optional
         Degrees of freedom of the estimate; infinite (the default) where known.
+    lasting : bool, optional
+        Whether many batches will be judged by it.
 
     Returns
     -------
@@ -130,7 +154,7 @@ def factor_covariance(matrix: Matrix, degrees_of_freedom: float = math.inf) -> C
     rcond, _ = lapack.dpocon(factor, np.abs(correlation).sum(axis=0).max(), uplo="L")
     if rcond < REFUSED_BELOW:
         raise IllConditionedError(_too_close(float(rcond)))
-    return Covariance(scale, factor, degrees_of_freedom, float(rcond))
+    return Covariance(scale, factor, degrees_of_freedom, float(rcond), lasting)
 
 
 def _refusal(correlation: Matrix) -> NotPositiveDefiniteError | IllConditionedError:

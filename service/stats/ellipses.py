@@ -13,7 +13,7 @@ References
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 import numpy as np
@@ -81,6 +81,13 @@ def confidence_ellipses(result: LocationResult, alpha: float) -> Ellipses:
     Ellipses
         Johnson and Wichern 2007, equation 5-19, for each pair.
     """
+    key = ("ellipses", result.law, result.effective_units, alpha)
+    shape = result.covariance.keep(key, lambda: _shape(result, alpha))
+    return replace(shape, centre=result.difference[shape.pairs])
+
+
+def _shape(result: LocationResult, alpha: float) -> Ellipses:
+    """Return the ellipses about the origin: what the mean itself does not change."""
     pairs = _pairs(result.law.dimension)
     critical, separate = _critical_values(result.law, alpha)
     scale = result.covariance.scale[pairs]
@@ -91,7 +98,7 @@ def confidence_ellipses(result: LocationResult, alpha: float) -> Ellipses:
     standardised = np.sqrt(1.0 + np.abs(correlation)[:, None] * _OUT_AND_IN)
     return Ellipses(
         pairs=pairs,
-        centre=result.difference[pairs],
+        centre=np.zeros(pairs.shape),
         half_lengths=radius * lengths,
         angle=angle,
         standardised_half_lengths=radius * standardised,

@@ -29,7 +29,7 @@ import numpy.typing as npt
 from scipy.linalg import lapack
 
 from service.stats import tails
-from service.stats.arrays import Vector
+from service.stats.arrays import Matrix, Vector
 from service.stats.laws import QuadraticLaw
 from service.stats.location import LocationResult
 from service.stats.multiplicity import holm
@@ -107,10 +107,13 @@ class OneAtATime:
     family_wise_error_bonferroni: float
 
 
-class _Multipliers(NamedTuple):
-    t_squared: float
-    bonferroni: float
-    separate: float
+class _Widths(NamedTuple):
+    """Standard errors and half-widths, which the mean itself does not change."""
+
+    standard_error: Vector
+    t_squared: Vector
+    bonferroni: Vector
+    separate: Vector
 
 
 def follow_up(result: LocationResult, alpha: float) -> FollowUp:
@@ -128,22 +131,22 @@ def follow_up(result: LocationResult, alpha: float) -> FollowUp:
     FollowUp
         Johnson and Wichern 2007, equations 5-24 (T-squared) and 5-29 (Bonferroni).
     """
-    covariance, dof = result.covariance, result.law.degrees_of_freedom
-    error = covariance.scale / math.sqrt(result.effective_units)
-    ratio = result.difference / error
+    dof = result.law.degrees_of_freedom
+    key = ("widths", result.law, result.effective_units, alpha)
+    widths = result.covariance.keep(key, lambda: _widths(result, alpha))
+    ratio = result.difference / widths.standard_error
     p_value = tails.t_two_sided(ratio, dof)
-    multipliers = _multipliers(result.law, alpha)
     conditional = _terms_given_others(result)
     return FollowUp(
         difference=result.difference,
-        standard_error=error,
+        standard_error=widths.standard_error,
         ratio=ratio,
         p_value=p_value,
         log10_p_value=tails.t_two_sided_log10(ratio, dof),
         holm_p_value=holm(p_value),
-        t_squared_half_width=multipliers.t_squared * error,
-        bonferroni_half_width=multipliers.bonferroni * error,
-        separate_half_width=multipliers.separate * error,
+        t_squared_half_width=widths.t_squared,
+        bonferroni_half_width=widths.bonferroni,
+        separate_half_width=widths.separate,
         term_alone=ratio * ratio,
         term_given_others=conditional,
         p_value_given_others=_conditional_p_values(result, conditional),
@@ -181,11 +184,16 @@ def one_at_a_time(p_values: Vector, alpha: float) -> OneAtATime:
 
 def _terms_given_others(result: LocationResult) -> Vector:
     """Return ``k (R^-1 z)_j^2 / (R^-1)_jj``; the scale of measurement cancels."""
-    inverse_factor, _ = lapack.dtrtri(result.covariance.factor, lower=1)
-    # (R^-1)_jj is the squared length of column j of L^-1, as R^-1 = L^-T L^-1.
-    diagonal = np.einsum("ij,ij->j", inverse_factor, inverse_factor)
+    factor = result.covariance.factor
+    diagonal = result.covariance.keep("inverse diagonal", lambda: _inverse_diagonal(factor))
     solved = result.direction * result.covariance.scale * result.mahalanobis_distance
     return np.asarray(result.effective_units * solved * solved / diagonal)
+
+
+def _inverse_diagonal(factor: Matrix) -> Vector:
+    """Return (R^-1)_jj, the squared length of column j of L^-1, as R^-1 = L^-T L^-1."""
+    inverse_factor, _ = lapack.dtrtri(factor, lower=1)
+    return np.asarray(np.einsum("ij,ij->j", inverse_factor, inverse_factor))
 
 
 def _conditional_p_values(result: LocationResult, terms: Vector) -> Vector:
@@ -197,12 +205,15 @@ def _conditional_p_values(result: LocationResult, terms: Vector) -> Vector:
     return tails.t_two_sided(np.sqrt(terms * dof / (law.degrees_of_freedom + others)), dof)
 
 
+def _widths(result: LocationResult, alpha: float) -> _Widths:
+    error = result.covariance.scale / math.sqrt(result.effective_units)
+    t_squared, bonferroni, separate = _multipliers(result.law, alpha)
+    return _Widths(error, t_squared * error, bonferroni * error, separate * error)
+
+
 @lru_cache(maxsize=1024)
-def _multipliers(law: QuadraticLaw, alpha: float) -> _Multipliers:
+def _multipliers(law: QuadraticLaw, alpha: float) -> tuple[float, float, float]:
     """Return the half-widths of the three intervals, in standard errors."""
     dof = law.degrees_of_freedom
-    return _Multipliers(
-        math.sqrt(law.critical_value(alpha)),
-        tails.t_critical(alpha / law.dimension, dof),
-        tails.t_critical(alpha, dof),
-    )
+    bonferroni = tails.t_critical(alpha / law.dimension, dof)
+    return math.sqrt(law.critical_value(alpha)), bonferroni, tails.t_critical(alpha, dof)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from functools import lru_cache
 
 from service.errors import TooFewUnitsError
 from service.stats import tails
@@ -75,10 +76,15 @@ class QuadraticLaw:
 
     def critical_value(self, level: float) -> float:
         """Return the value, in units of ``T2``, exceeded with probability `level`."""
-        if self.is_chi_square:
-            return tails.chi_square_critical(level, self.dimension)
-        return tails.f_critical(level, *self.parameters) / self.factor
+        return _critical_value(self, level)
 
     def over(self, size: int) -> QuadraticLaw:
         """Return the law of the same form over `size` of the characteristics."""
         return QuadraticLaw(size, self.degrees_of_freedom)
+
+
+@lru_cache(maxsize=4096)
+def _critical_value(law: QuadraticLaw, level: float) -> float:
+    if law.is_chi_square:
+        return tails.chi_square_critical(level, law.dimension)
+    return tails.f_critical(level, *law.parameters) / law.factor

@@ -82,12 +82,12 @@ def sample_moments(x: Matrix, mu0: Vector) -> Moments:
     """
     deviations = x - mu0
     n, p = deviations.shape
-    difference = deviations.mean(axis=0)
+    difference = np.add.reduce(deviations, axis=0) / n
     centred = deviations - difference
     # A second pass takes away what rounding left in the first mean.
-    correction = centred.mean(axis=0)
+    correction = np.add.reduce(centred, axis=0) / n
     centred -= correction
-    difference = difference + correction
+    difference += correction
     if n == 1:
         nothing = TooFewUnitsError("One unit has no sample covariance.")
         return Moments(deviations, difference, centred, np.full((p, p), math.nan), None, None, nothing)

@@ -235,7 +235,7 @@ def test_any_number_of_units_gives_an_answer_or_a_refusal_by_name(kind: str, n: 
 def test_a_constant_characteristic_is_refused_by_name_with_the_batchs_own_covariance() -> None:
     rows = sample("constant", 12)
     rows[:, 2] = 120.0
-    with pytest.raises(NotPositiveDefiniteError, match="Variance 3"):
+    with pytest.raises(NotPositiveDefiniteError, match="Characteristic 3 is constant"):
         judged(rows, covariance={"kind": "batch"})
     held = judged(rows)
     assert held.outcome == "held"
