@@ -87,6 +87,8 @@ def _described(operation: Operation) -> dict[str, Any]:
         content: dict[str, Any] = {"schema": operation.body, "example": operation.example}
         described["requestBody"] = {"required": True, "content": {"application/json": content}}
     responses: dict[str, Any] = {str(status): _response(status, shape) for status, shape in operation.answers.items()}
+    for response in responses.values():
+        response["content"] |= {other: {"schema": {"type": "string"}} for other in operation.other_types}
     responses |= {str(status): f"Problem{status}" for status in operation.problems}
     described["responses"] = responses
     return described

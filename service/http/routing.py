@@ -42,6 +42,8 @@ class Operation:
         A body that is taken.
     answers : mapping of int to Schema or str
         Shape, or media type, of the answer with each status.
+    other_types : tuple of str
+        Media types that the answer is offered in besides, by Accept.
     problems : tuple of int
         Statuses of the problems that it can answer with.
     headers : mapping of str to str
@@ -60,6 +62,7 @@ class Operation:
     query: Schema | None = None
     example: Mapping[str, Any] | None = None
     answers: Mapping[int, Schema | str] = field(default_factory=dict)
+    other_types: tuple[str, ...] = ()
     problems: tuple[int, ...] = ()
     headers: Mapping[str, str] = field(default_factory=dict)
 
