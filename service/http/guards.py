@@ -6,6 +6,7 @@ from collections.abc import Iterable
 from typing import Any
 
 from flask import current_app, request
+from gunicorn.http.errors import ParseException
 from marshmallow import Schema, ValidationError
 from werkzeug.exceptions import NotAcceptable, RequestEntityTooLarge, UnsupportedMediaType
 
@@ -28,7 +29,7 @@ def read_body() -> bytes:
     RequestEntityTooLarge
         Where it is larger than the limit, also when sent in chunks.
     MalformedRequestError
-        Where the connection was cut before its end.
+        Where the connection was cut before its end, or its chunks are none.
     """
     if request.mimetype != JSON:
         raise UnsupportedMediaType(f"Send the body as {JSON}; this one is {request.mimetype or 'of no declared type'}.")
@@ -39,6 +40,8 @@ def read_body() -> bytes:
         body = request.get_data(cache=False)
     except RequestEntityTooLarge as error:
         raise _too_large(limit) from error
+    except ParseException as error:
+        raise MalformedRequestError(f"The body cannot be read as it was sent: {error}.") from error
     # A chunked body is cut silently at MAX_CONTENT_LENGTH, which is therefore one byte above the limit.
     if len(body) > limit:
         raise _too_large(limit)
