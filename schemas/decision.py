@@ -17,11 +17,13 @@ class NamedOrWhole(fields.Field[dict[str, Any]]):
 
     named = SpecificationReferenceSchema()
     whole = SpecificationSchema()
+    OF_WHOLE = frozenset(SpecificationSchema().fields) - frozenset(SpecificationReferenceSchema().fields)
 
     def _deserialize(
         self, value: Any, attr: str | None, data: Mapping[str, Any] | None, **options: Any
     ) -> dict[str, Any]:
-        whole = isinstance(value, Mapping) and "characteristics" in value
+        # Whole is also what misses a member, or has one misspelt: then its own faults are of use.
+        whole = isinstance(value, Mapping) and not self.OF_WHOLE.isdisjoint(value)
         loaded: dict[str, Any] = (self.whole if whole else self.named).load(value)
         return loaded
 

@@ -10,6 +10,7 @@ from datetime import datetime, timezone
 from typing import Any
 
 from marshmallow import ValidationError, fields
+from marshmallow.validate import Length
 
 MAXIMUM_ROWS = 10_000
 MAXIMUM_COLUMNS = 100
@@ -17,9 +18,19 @@ MAXIMUM_COLUMNS = 100
 LARGEST = 1e100
 """No measured value is larger in size; squares of larger ones would leave the range of a double."""
 
-_NO_NUMBER = f"Give a finite number of at most {LARGEST:g} in size, without quotes."
+_NO_NUMBER = "Give a finite number of at most 1e100 in size, without quotes."
 
-_INSTANT = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|[+-]\d\d:\d\d)")
+_INSTANT = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|[+-]\d\d:\d\d)", re.ASCII)
+
+# Categories of Unicode: control characters, halves of surrogate pairs, line and paragraph separators.
+_UNREADABLE = frozenset({"Cc", "Cs", "Zl", "Zp"})
+# Marks that turn the direction of writing: with them a text reads otherwise than it is compared.
+_TURNING = frozenset("\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069")
+
+
+def entries(most: int) -> Length:
+    """Return a validator of lists: at least one entry, and not too many."""
+    return Length(1, most, error="Give {min} to {max} entries.")
 
 
 class Number(fields.Field[float]):
@@ -63,14 +74,13 @@ class Number(fields.Field[float]):
 def as_number(value: object) -> float | None:
     """Return a finite float, with -0.0 as 0.0, or None where the value is not a JSON number."""
     # bool is an int to Python, but true is no number to JSON.
-    if type(value) is float or type(value) is int:
+    if type(value) is not float and type(value) is not int:
+        return None
+    try:
         number = float(value) + 0.0
-        return number if abs(number) <= LARGEST else None
-    return None
-
-
-def _in_range(table: list[list[float]]) -> bool:
-    return min(map(min, table)) >= -LARGEST and max(map(max, table)) <= LARGEST
+    except OverflowError:
+        return None
+    return number if abs(number) <= LARGEST else None
 
 
 class Count(fields.Integer):
@@ -95,7 +105,7 @@ class Flag(fields.Boolean):
 
 
 class Text(fields.String):
-    """A text without control characters, not blank, of limited length.
+    """A text of limited length, not blank, that reads as it is: no control characters, line breaks or turning marks.
 
     Parameters
     ----------
@@ -114,9 +124,19 @@ class Text(fields.String):
             raise ValidationError("Give a text that is not blank.")
         if len(value) > self.longest:
             raise ValidationError(f"Give at most {self.longest} characters; this text has {len(value)}.")
-        if any(unicodedata.category(character) in ("Cc", "Cs") for character in value):
+        if any(unicodedata.category(character) in _UNREADABLE or character in _TURNING for character in value):
             raise ValidationError("Leave control characters, such as line breaks, out of the text.")
         return value
+
+
+class Name(Text):
+    """A text by which something is found again; blanks around it would make another name that looks the same."""
+
+    def _deserialize(self, value: Any, attr: str | None, data: Mapping[str, Any] | None, **options: Any) -> str:
+        text = super()._deserialize(value, attr, data, **options)
+        if text != text.strip():
+            raise ValidationError("Leave out the blanks before and after the text.")
+        return text
 
 
 class Code(Text):
@@ -150,6 +170,15 @@ class Choice(fields.String):
         return value
 
 
+class Written(fields.Integer):
+    """A whole number written in plain digits, as query parameters are; it fits the columns of any store."""
+
+    def _deserialize(self, value: Any, attr: str | None, data: Mapping[str, Any] | None, **options: Any) -> int:
+        if not isinstance(value, str) or not re.fullmatch("[0-9]{1,18}", value):
+            raise ValidationError("Give a whole number in plain digits.")
+        return int(value)
+
+
 class Instant(fields.String):
     """A time with its offset (RFC 3339), brought to UTC with microseconds and ``Z``."""
 
@@ -157,7 +186,8 @@ class Instant(fields.String):
         at = as_instant(value)
         if at is None:
             raise ValidationError("Give a time with its offset, such as 2026-12-01T07:30:00Z (RFC 3339).")
-        return at.strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+        # Not strftime, which writes years before 1000 with fewer digits: times are compared as text.
+        return at.replace(tzinfo=None).isoformat(timespec="microseconds") + "Z"
 
 
 def as_instant(value: object) -> datetime | None:
@@ -209,12 +239,7 @@ class Matrix(fields.Field[list[list[float | None]]]):
             raise ValidationError(f"Give at most {MAXIMUM_ROWS} rows of at most {MAXIMUM_COLUMNS} numbers.")
         width = len(value[0])
         plain = all(type(row) is list and len(row) == width and set(map(type, row)) <= {float, int} for row in value)
-        if plain:
-            table = [[cell + 0.0 for cell in row] for row in value]
-            # A sum that is no number says that a cell is none; then look at each.
-            if not math.isnan(sum(map(sum, table))) and _in_range(table):
-                return table
-        return self._cell_by_cell(value, width)
+        return (_in_range(value) if plain else None) or self._cell_by_cell(value, width)
 
     def _cell_by_cell(self, value: list[Any], width: int) -> list[list[float | None]]:
         faults: dict[int, Any] = {}
@@ -241,3 +266,15 @@ class Matrix(fields.Field[list[list[float | None]]]):
             return "Results below or above a limit are not taken here; give a number."
         number = as_number(cell)
         return _NO_NUMBER if number is None else number
+
+
+def _in_range(table: list[list[float]]) -> list[Any] | None:
+    """Return a table of numbers as floats, or None where each cell must be looked at."""
+    try:
+        floats = [[cell + 0.0 for cell in row] for row in table]
+    except OverflowError:
+        return None
+    # A sum that is no number says that a cell is none, which comparisons would not.
+    if math.isnan(sum(map(sum, floats))):
+        return None
+    return floats if min(map(min, floats)) >= -LARGEST and max(map(max, floats)) <= LARGEST else None

@@ -39,7 +39,11 @@ class PlanRequestSchema(Shape):
     """A specification, and what is asked of it."""
 
     specification = NamedOrWhole(required=True)
-    units = Count(required=True, validate=Range(1, MAXIMUM_ROWS), metadata={"description": "Units in a batch."})
+    units = Count(
+        required=True,
+        validate=Range(1, MAXIMUM_ROWS, error="Give a number from {min} to {max}."),
+        metadata={"description": "Units in a batch."},
+    )
     shift = Shift(required=True)
     power = Number(above=0, below=1, metadata={"description": "Wanted power; 0.9 where left out."})
 

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
 from marshmallow import ValidationError, fields, validates_schema
-from marshmallow.validate import Length
 
 from schemas.base import Shape
-from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, Matrix, Number, Text
+from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, Matrix, Name, Number, Text, entries
 
 SMALLEST_LEVEL = 1e-12
 """Below this a level cannot be told from never rejecting, and critical values leave the range of a double."""
@@ -31,13 +31,22 @@ SCREENS = (
 class CharacteristicSchema(Shape):
     """One characteristic with its target."""
 
-    name = Text(required=True, longest=100)
-    measurement_unit = Text(required=True, longest=50)
+    name = Name(required=True, longest=100)
+    measurement_unit = Name(required=True, longest=50)
     target = Number(required=True)
     scale = Choice("linear")
     lower_bound = Number(metadata={"description": "Physical lower bound of a single value."})
     upper_bound = Number(metadata={"description": "Physical upper bound of a single value."})
     tolerance = Number(above=0, metadata={"description": "Equivalence: largest difference of the mean allowed."})
+
+
+_NEEDED = {
+    "known": {"matrix"},
+    "reference": {"matrix", "degrees_of_freedom"},
+    "batch": set[str](),
+    "pooled": {"matrix", "degrees_of_freedom"},
+}
+_OPTIONAL = {"known": set[str](), "reference": {"target_units"}, "batch": set[str](), "pooled": {"target_units"}}
 
 
 class CovarianceSchema(Shape):
@@ -58,19 +67,16 @@ class CovarianceSchema(Shape):
     degrees_of_freedom = Number(above=0)
     target_units = Number(above=0, metadata={"description": "Units behind an estimated target; absent where fixed."})
 
-    @validates_schema
-    def _members_of_kind(self, data: dict[str, Any], **_: Any) -> None:
-        """Ask for what the kind needs, and refuse what it does not know."""
-        needed = {
-            "known": {"matrix"},
-            "reference": {"matrix", "degrees_of_freedom"},
-            "batch": set[str](),
-            "pooled": {"matrix", "degrees_of_freedom"},
-        }[data["kind"]]
-        allowed = needed | ({"target_units"} if "degrees_of_freedom" in needed else set())
-        given = set(data) - {"kind"}
-        faults = {name: [f"A covariance of kind {data['kind']!r} needs this."] for name in needed - given}
-        faults |= {name: [f"A covariance of kind {data['kind']!r} takes no {name}."] for name in given - allowed}
+    @validates_schema(pass_original=True, skip_on_field_errors=False)
+    def _members_of_kind(self, data: dict[str, Any], original: object, **_: Any) -> None:
+        """Ask for what the kind needs, and refuse what it does not take, beside any other fault."""
+        kind = data.get("kind")
+        if kind is None or not isinstance(original, Mapping):
+            return
+        given = set(original) & set(self.fields) - {"kind"}
+        needed, allowed = _NEEDED[kind], _NEEDED[kind] | _OPTIONAL[kind]
+        faults = {name: [f"A covariance of kind {kind!r} needs this."] for name in sorted(needed - given)}
+        faults |= {name: [f"A covariance of kind {kind!r} takes no {name}."] for name in sorted(given - allowed)}
         if faults:
             raise ValidationError(faults)
 
@@ -89,11 +95,11 @@ class QuestionSchema(Shape):
     required_power = fields.Nested(RequiredPowerSchema)
     delta = Number(above=0, metadata={"description": "Equivalence: largest Mahalanobis shift that does not matter."})
 
-    @validates_schema
-    def _members_of_form(self, data: dict[str, Any], **_: Any) -> None:
-        """Refuse what belongs to the other form."""
-        other = {"difference": "delta", "equivalence": "required_power"}[data["form"]]
-        if other in data:
+    @validates_schema(pass_original=True, skip_on_field_errors=False)
+    def _members_of_form(self, data: dict[str, Any], original: object, **_: Any) -> None:
+        """Refuse what belongs to the other form, beside any other fault."""
+        other = {"difference": "delta", "equivalence": "required_power"}.get(data.get("form", ""))
+        if other and isinstance(original, Mapping) and other in original:
             raise ValidationError(f"A question of form {data['form']!r} takes no {other}.", other)
 
 
@@ -110,9 +116,7 @@ class SpecificationSchema(Shape):
 
     code = Code(required=True)
     title = Text(longest=200)
-    characteristics = fields.List(
-        fields.Nested(CharacteristicSchema), required=True, validate=Length(1, MAXIMUM_COLUMNS)
-    )
+    characteristics = fields.List(fields.Nested(CharacteristicSchema), required=True, validate=entries(MAXIMUM_COLUMNS))
     covariance = fields.Nested(CovarianceSchema, required=True)
     significance_level = Number(required=True, least=SMALLEST_LEVEL, most=0.5)
     question = fields.Nested(QuestionSchema, required=True)

@@ -19,7 +19,7 @@ from schemas.query import DecisionQuerySchema
 from service.domain.actor import Actor
 from service.errors import MalformedRequestError
 from service.http import answers
-from service.http.guards import negotiate
+from service.http.guards import JSON, negotiate
 from service.http.routing import Routes
 from service.procedures import decide, read
 from service.procedures.evaluate import evaluate_batch
@@ -98,14 +98,15 @@ def list_decisions(site: Site, actor: Actor, query: dict[str, Any]) -> Response:
     "/v1/decisions/<record_id>",
     roles=_READERS,
     answers={200: RecordSchema()},
-    problems=(401, 403, 404, 406, 503),
+    other_types=(answers.JOSE,),
+    problems=(400, 401, 403, 404, 406, 503),
 )
 def read_decision(site: Site, actor: Actor, record_id: str) -> Response:
     """Read a decision record.
 
     As application/json: the record with its envelope. As application/jose: the envelope alone.
     """
-    media_type = negotiate("application/json", answers.JOSE)
+    media_type = negotiate(JSON, answers.JOSE)
     return answers.record(read.decision(site, actor, record_id), media_type=media_type)
 
 
@@ -113,7 +114,7 @@ def read_decision(site: Site, actor: Actor, record_id: str) -> Response:
     "/v1/decisions/<record_id>/bundle",
     roles=_READERS,
     answers={200: BundleSchema()},
-    problems=(401, 403, 404, 503),
+    problems=(400, 401, 403, 404, 503),
 )
 def read_bundle(site: Site, actor: Actor, record_id: str) -> Response:
     """Take everything that `acceptance verify` needs, but the trusted key."""

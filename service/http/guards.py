@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import Any
 
 from flask import current_app, request
+from gunicorn.http.errors import ParseException
 from marshmallow import Schema, ValidationError
 from werkzeug.exceptions import NotAcceptable, RequestEntityTooLarge, UnsupportedMediaType
 
-from service.errors import InvalidContentError, MalformedRequestError
+from service.errors import InvalidContentError, MalformedRequestError, NotFoundError
 from service.http.problems import refused
 from service.signing.canonical import inexact_numbers, strict_loads
 
 JSON = "application/json"
+
+_LONGEST = 200
 
 
 def read_body() -> bytes:
@@ -25,7 +29,7 @@ def read_body() -> bytes:
     RequestEntityTooLarge
         Where it is larger than the limit, also when sent in chunks.
     MalformedRequestError
-        Where the connection was cut before its end.
+        Where the connection was cut before its end, or its chunks are none.
     """
     if request.mimetype != JSON:
         raise UnsupportedMediaType(f"Send the body as {JSON}; this one is {request.mimetype or 'of no declared type'}.")
@@ -36,6 +40,8 @@ def read_body() -> bytes:
         body = request.get_data(cache=False)
     except RequestEntityTooLarge as error:
         raise _too_large(limit) from error
+    except ParseException as error:
+        raise MalformedRequestError(f"The body cannot be read as it was sent: {error}.") from error
     # A chunked body is cut silently at MAX_CONTENT_LENGTH, which is therefore one byte above the limit.
     if len(body) > limit:
         raise _too_large(limit)
@@ -92,6 +98,30 @@ def load_query(schema: Schema) -> dict[str, Any]:
     return loaded
 
 
+def refuse_query() -> None:
+    """Refuse query parameters where none is known, so that none is thought to have had an effect.
+
+    Raises
+    ------
+    MalformedRequestError
+        Where there is one.
+    """
+    if request.args:
+        raise MalformedRequestError(f"This takes no query parameters; leave out {', '.join(request.args)}.")
+
+
+def refuse_unreadable(parameters: Iterable[object]) -> None:
+    """Refuse path parameters that no name can be: a store need not be asked, and not every store could answer.
+
+    Raises
+    ------
+    NotFoundError
+        Where one holds control characters or is longer than any name.
+    """
+    if not all(text.isprintable() and len(text) <= _LONGEST for text in map(str, parameters)):
+        raise NotFoundError("There is nothing at this path.")
+
+
 def negotiate(*offers: str) -> str:
     """Return the media type, among those offered, that the client likes best.
 
@@ -100,7 +130,7 @@ def negotiate(*offers: str) -> str:
     NotAcceptable
         Where it takes none of them.
     """
-    if "Accept" not in request.headers:
+    if not request.headers.get("Accept", "").strip():
         return offers[0]
     best = request.accept_mimetypes.best_match(offers)
     if best is None:

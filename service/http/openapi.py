@@ -9,7 +9,6 @@ import json
 import re
 import sys
 from collections.abc import Callable, Mapping, Sequence
-from http import HTTPStatus
 from typing import Any
 
 import yaml
@@ -23,6 +22,7 @@ from schemas.plan import Shift
 from schemas.problem import ProblemSchema
 from schemas.specification import SpecificationReferenceSchema, SpecificationSchema
 from service import __version__
+from service.http.problems import phrase
 from service.http.routing import Operation
 
 _DESCRIPTION = (
@@ -87,6 +87,8 @@ def _described(operation: Operation) -> dict[str, Any]:
         content: dict[str, Any] = {"schema": operation.body, "example": operation.example}
         described["requestBody"] = {"required": True, "content": {"application/json": content}}
     responses: dict[str, Any] = {str(status): _response(status, shape) for status, shape in operation.answers.items()}
+    for response in responses.values():
+        response["content"] |= {other: {"schema": {"type": "string"}} for other in operation.other_types}
     responses |= {str(status): f"Problem{status}" for status in operation.problems}
     described["responses"] = responses
     return described
@@ -108,15 +110,14 @@ def _parameters(operation: Operation) -> list[dict[str, Any]]:
 
 
 def _response(status: int, shape: Schema | str) -> dict[str, Any]:
-    phrase = HTTPStatus(status).phrase
     if isinstance(shape, str):
-        return {"description": phrase, "content": {shape: {"schema": {"type": "string"}}}}
-    return {"description": phrase, "content": {"application/json": {"schema": shape}}}
+        return {"description": phrase(status), "content": {shape: {"schema": {"type": "string"}}}}
+    return {"description": phrase(status), "content": {"application/json": {"schema": shape}}}
 
 
 def _problem_response(status: int) -> dict[str, Any]:
     return {
-        "description": HTTPStatus(status).phrase,
+        "description": phrase(status),
         "content": {"application/problem+json": {"schema": ProblemSchema}},
     }
 

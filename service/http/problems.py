@@ -35,9 +35,22 @@ STATUS: Mapping[type[ServiceError], int] = MappingProxyType(
 )
 """Status of each error; any other is a fault of this program, 500."""
 
+MOST_FAULTS = 1000
+"""Faults that one problem lists; of more, their number is said."""
+
+_PHRASES: Mapping[int, str] = MappingProxyType(
+    {
+        413: "Content Too Large",
+        414: "URI Too Long",
+        416: "Range Not Satisfiable",
+        422: "Unprocessable Content",
+    }
+)
+"""Phrases of RFC 9110 that differ between versions of Python; codes and documents are made of them."""
+
 TITLES: Mapping[str, str] = MappingProxyType(
     {
-        "malformed-request": "The body is not one strict JSON document",
+        "malformed-request": "The request cannot be read",
         "unauthenticated": "No valid token",
         "not-permitted": "Not permitted in this role",
         "self-approval": "Authors do not approve their own work",
@@ -71,15 +84,22 @@ def problem(status: int, code: str, detail: str, faults: tuple[Fault, ...] = ())
     faults : tuple of Fault, optional
         Every fault found.
     """
+    if len(faults) > MOST_FAULTS:
+        detail += f" Only the first {MOST_FAULTS} of {len(faults)} faults are listed."
     document = {
         "type": f"/problems/{code}",
-        "title": TITLES.get(code) or HTTPStatus(status).phrase,
+        "title": TITLES.get(code) or phrase(status),
         "status": status,
         "detail": detail,
         "code": code,
-        "errors": [fault.to_dict() for fault in faults],
+        "errors": [fault.to_dict() for fault in faults[:MOST_FAULTS]],
     }
     return Response(json.dumps(document, ensure_ascii=False), status, mimetype="application/problem+json")
+
+
+def phrase(status: int) -> str:
+    """Return what a status means, in the words of RFC 9110 whatever the version of Python."""
+    return _PHRASES.get(status) or HTTPStatus(status).phrase
 
 
 def register(app: Flask) -> None:
@@ -103,8 +123,8 @@ def _service_error(error: ServiceError) -> Response:
 
 def _http_error(error: HTTPException) -> Response:
     status = error.code or 500
-    code = HTTPStatus(status).phrase.lower().replace(" ", "-")
-    answer = problem(status, code, error.description or HTTPStatus(status).phrase)
+    code = phrase(status).lower().replace(" ", "-")
+    answer = problem(status, code, error.description or phrase(status))
     if isinstance(error, MethodNotAllowed) and error.valid_methods:
         answer.headers["Allow"] = ", ".join(sorted(error.valid_methods))
     return answer

@@ -12,7 +12,7 @@ from marshmallow import Schema
 
 from service.domain.actor import Actor, Role
 from service.errors import NotPermittedError
-from service.http.guards import load_body, load_query, read_body
+from service.http.guards import load_body, load_query, read_body, refuse_query, refuse_unreadable
 from service.procedures.site import Site
 from service.procedures.tokens import recognise
 from service.storage.store import Received
@@ -42,6 +42,8 @@ class Operation:
         A body that is taken.
     answers : mapping of int to Schema or str
         Shape, or media type, of the answer with each status.
+    other_types : tuple of str
+        Media types that the answer is offered in besides, by Accept.
     problems : tuple of int
         Statuses of the problems that it can answer with.
     headers : mapping of str to str
@@ -60,6 +62,7 @@ class Operation:
     query: Schema | None = None
     example: Mapping[str, Any] | None = None
     answers: Mapping[int, Schema | str] = field(default_factory=dict)
+    other_types: tuple[str, ...] = ()
     problems: tuple[int, ...] = ()
     headers: Mapping[str, str] = field(default_factory=dict)
 
@@ -114,10 +117,14 @@ def site() -> Site:
 
 def _answer(operation: Operation, **given: Any) -> Response:
     """Establish who asks and what, each in its turn, and call the view."""
+    parameters = tuple(given.values())
     if operation.roles:
         given["actor"] = _permitted(operation)
+        refuse_unreadable(parameters)
     if operation.query is not None:
         given["query"] = load_query(operation.query)
+    elif operation.roles:
+        refuse_query()
     if operation.body is not None:
         body = read_body()
         given["body"] = load_body(body, operation.body)

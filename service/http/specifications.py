@@ -85,7 +85,7 @@ def withdraw_specification(
     return _step_answer(site, specifications.withdraw(site, actor, step), 201)
 
 
-@routes.route("/v1/specifications", roles=_READERS, answers={200: VersionListSchema()}, problems=(401, 403, 503))
+@routes.route("/v1/specifications", roles=_READERS, answers={200: VersionListSchema()}, problems=(400, 401, 403, 503))
 def list_specifications(site: Site, actor: Actor) -> Response:
     """List the codes of all specifications."""
     with site.store.reading() as view:
@@ -93,7 +93,7 @@ def list_specifications(site: Site, actor: Actor) -> Response:
 
 
 @routes.route(
-    "/v1/specifications/<code>", roles=_READERS, answers={200: VersionListSchema()}, problems=(401, 403, 404, 503)
+    "/v1/specifications/<code>", roles=_READERS, answers={200: VersionListSchema()}, problems=(400, 401, 403, 404, 503)
 )
 def list_versions(site: Site, actor: Actor, code: str) -> Response:
     """List the versions of a specification, oldest first, with their states."""
@@ -101,7 +101,7 @@ def list_versions(site: Site, actor: Actor, code: str) -> Response:
     return answers.plain({"items": [_described(site, row, rows) for row in rows]})
 
 
-@routes.route(_VERSION, roles=_READERS, answers={200: VersionSchema()}, problems=(401, 403, 404, 503))
+@routes.route(_VERSION, roles=_READERS, answers={200: VersionSchema()}, problems=(400, 401, 403, 404, 503))
 def read_version(site: Site, actor: Actor, code: str, version: int) -> Response:
     """Read a version: its document, its present state, and every signed record of its life."""
     row, payloads = read.specification(site, code, version)

@@ -12,8 +12,9 @@ import hashlib
 import json
 import math
 import re
+from collections import Counter
 from collections.abc import Iterator, Mapping
-from decimal import Decimal
+from decimal import Decimal, InvalidOperation
 from typing import Any, NoReturn
 
 import rfc8785
@@ -27,6 +28,10 @@ MAXIMUM_DEPTH = 32
 
 # A literal of 16 or more digits may not survive as a double; one with a large exponent may overflow or vanish.
 _SUSPECT_NUMBER = re.compile(rb"[0-9][0-9.]{15,}|[eE][+-]?[0-9]{3,}")
+
+# A string, or a bracket outside of strings.  Possessive, and with its last quote optional, so that no text is
+# read twice: an open string full of escaped quotes would otherwise take quadratic time.
+_STRING_OR_BRACKET = re.compile(r'(?s)"[^"\\]*+(?:\\.[^"\\]*+)*+"?|[\[\]{}]')
 
 
 def encode(document: object) -> bytes:
@@ -103,7 +108,7 @@ def strict_loads(data: bytes) -> Any:
 def _refuse_deep(text: str) -> None:
     """Refuse deep nesting before the parser recurses into it; brackets inside strings do not count."""
     depth = 0
-    for token in re.finditer(r'"(?:[^"\\]|\\.)*"|[\[\]{}]', text):
+    for token in _STRING_OR_BRACKET.finditer(text):
         if token[0] in "[{":
             depth += 1
             if depth > MAXIMUM_DEPTH:
@@ -115,8 +120,8 @@ def _refuse_deep(text: str) -> None:
 def _unique_names(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
     members = dict(pairs)
     if len(members) != len(pairs):
-        names = [name for name, _ in pairs]
-        twice = next(name for i, name in enumerate(names) if name in names[:i])
+        # Counted in one pass, as a body may hold a million names.
+        twice = next(name for name, times in Counter(name for name, _ in pairs).items() if times > 1)
         raise MalformedRequestError(f"The member {twice!r} stands twice in one object; which one counts is not said.")
     return members
 
@@ -135,9 +140,12 @@ def _integer(text: str) -> int | float:
 def _finite(text: str) -> float:
     value = float(text)
     if math.isinf(value):
-        shown = text if len(text) <= 30 else text[:27] + "..."
-        raise MalformedRequestError(f"The number {shown} is larger than a double can hold.")
+        raise MalformedRequestError(f"The number {_shown(text)} is larger than a double can hold.")
     return value
+
+
+def _shown(literal: str) -> str:
+    return literal if len(literal) <= 30 else literal[:27] + "..."
 
 
 def _refuse_surrogates(document: object) -> None:
@@ -182,12 +190,22 @@ def inexact_numbers(data: bytes) -> list[Fault]:
     return [
         Fault(
             pointer,
-            f"{literal} has more digits than a double keeps; it would become {float(literal)!r}. Round it first.",
+            f"{_shown(literal)} has more digits than a double keeps; it would become {float(literal)!r}. "
+            "Round it first.",
             "number-not-exact",
         )
         for pointer, literal in _literals(document, "")
-        if Decimal(literal) != Decimal(repr(float(literal)))
+        if not _is_kept(literal)
     ]
+
+
+def _is_kept(literal: str) -> bool:
+    """Return whether a number's double has the value that is written."""
+    try:
+        return Decimal(literal) == Decimal(repr(float(literal)))
+    except InvalidOperation:
+        # The exponent is beyond Decimal's own: the double is 0, which is right only where every digit is 0.
+        return not re.search("[1-9]", re.split("[eE]", literal)[0])
 
 
 class _Literal(str):

@@ -129,7 +129,7 @@ def test_a_compressed_body_is_refused(border: Border) -> None:
 
 def test_a_body_above_the_limit_is_refused(border: Border) -> None:
     answer = border.post(GOOD.encode() + b" " * LIMIT)
-    assert (answer.status_code, answer.json()["code"]) == (413, "request-entity-too-large")
+    assert (answer.status_code, answer.json()["code"]) == (413, "content-too-large")
 
 
 def test_a_chunked_body_above_the_limit_is_refused_and_not_cut(border: Border) -> None:

@@ -107,3 +107,29 @@ def test_a_number_that_a_double_does_not_keep_is_named_with_its_place(literal: s
     [fault] = canonical.inexact_numbers(f'{{"a/b": [0, {literal}]}}'.encode())
     assert (fault.pointer, fault.code) == ("/a~1b/1", "number-not-exact")
     assert literal in fault.detail
+
+
+def test_an_open_string_full_of_escaped_quotes_is_refused_in_one_pass() -> None:
+    with pytest.raises(MalformedRequestError, match="Unterminated string"):
+        canonical.strict_loads(b'["' + b'\\"' * 1_000_000)
+
+
+def test_a_name_repeated_after_very_many_others_is_found_in_one_pass() -> None:
+    members = ",".join(f'"{i}":1' for i in range(300_000))
+    with pytest.raises(MalformedRequestError, match="'299999' stands twice"):
+        canonical.strict_loads(f'{{{members},"299999":2}}'.encode())
+
+
+def test_brackets_inside_strings_are_not_nesting() -> None:
+    text = ["[" * 100, '\\"' + "{" * 100, "]"]
+    assert canonical.strict_loads(json.dumps(text).encode()) == text
+
+
+@pytest.mark.parametrize(("literal", "kept"), [("1e-99999999999999999999", False), ("0e-99999999999999999999", True)])
+def test_an_exponent_beyond_any_arithmetic_is_judged_by_its_digits(literal: str, kept: bool) -> None:
+    assert (canonical.inexact_numbers(f"[{literal}]".encode()) == []) is kept
+
+
+def test_a_refused_number_is_shown_shortened() -> None:
+    [fault] = canonical.inexact_numbers(b"[0." + b"1" * 10_000 + b"]")
+    assert len(fault.detail) < 200
