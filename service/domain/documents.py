@@ -94,20 +94,18 @@ def _characteristics(specification: Specification, each: FollowUp, closed: Close
         "standard_error": each.standard_error.tolist(),
         "statistic": each.ratio.tolist(),
         "p_value": each.p_value.tolist(),
-        "log10_p_value": each.log10_p_value.tolist(),
         "holm_p_value": each.holm_p_value.tolist(),
         "closed_p_value": closed_p,
-        "interval_t_squared": _intervals(mean, each.t_squared_half_width),
-        "interval_bonferroni": _intervals(mean, each.bonferroni_half_width),
+        "interval_t_squared": _intervals(mean.tolist(), each.t_squared_half_width.tolist()),
+        "interval_bonferroni": _intervals(mean.tolist(), each.bonferroni_half_width.tolist()),
         "term_alone": each.term_alone.tolist(),
         "term_given_others": each.term_given_others.tolist(),
     }
     return [dict(zip(columns, values, strict=True)) for values in zip(*columns.values(), strict=True)]
 
 
-def _intervals(mean: np.ndarray[Any, Any], half_width: np.ndarray[Any, Any]) -> list[list[float]]:
-    intervals: list[list[float]] = np.stack((mean - half_width, mean + half_width), axis=1).tolist()
-    return intervals
+def _intervals(mean: list[float], half_width: list[float]) -> list[list[float]]:
+    return [[centre - width, centre + width] for centre, width in zip(mean, half_width, strict=True)]
 
 
 def _one_at_a_time(specification: Specification, each: FollowUp) -> dict[str, Any]:

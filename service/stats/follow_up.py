@@ -21,7 +21,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from typing import NamedTuple
 
 import numpy as np
@@ -35,7 +35,7 @@ from service.stats.location import LocationResult
 from service.stats.multiplicity import holm
 
 
-@dataclass(frozen=True, slots=True, eq=False)
+@dataclass(frozen=True, eq=False)
 class FollowUp:
     """The mean difference of each characteristic, shapes (p,) throughout.
 
@@ -44,6 +44,8 @@ class FollowUp:
 
     Parameters
     ----------
+    result : LocationResult
+        The mean test that is followed up.
     difference : ndarray
         ``d = xbar - mu0``, in units of measurement.
     standard_error : ndarray
@@ -51,7 +53,7 @@ class FollowUp:
     ratio : ndarray
         ``d_j`` in standard errors: standard normal where the covariance is known,
         else Student's t with nu degrees of freedom, where the mean agrees.
-    p_value, log10_p_value : ndarray
+    p_value : ndarray
         Two-sided, of each characteristic alone.
     holm_p_value : ndarray
         Adjusted for the p characteristics.
@@ -65,23 +67,34 @@ class FollowUp:
         ``k d_j^2 / s_jj``, the statistic of the characteristic alone.
     term_given_others : ndarray
         ``k (Sigma^-1 d)_j^2 / (Sigma^-1)_jj``, what it adds to the others' statistic.
-    p_value_given_others : ndarray
-        Of the conditional term: chi-square(1) where the covariance is known, else
-        ``term (nu - p + 1)/(nu + T2 of the others)`` is F(1, nu - p + 1).
     """
 
+    result: LocationResult
     difference: Vector
     standard_error: Vector
     ratio: Vector
     p_value: Vector
-    log10_p_value: Vector
     holm_p_value: Vector
     t_squared_half_width: Vector
     bonferroni_half_width: Vector
     separate_half_width: Vector
     term_alone: Vector
     term_given_others: Vector
-    p_value_given_others: Vector
+
+    @cached_property
+    def log10_p_value(self) -> Vector:
+        """Decimal logarithm of `p_value`, also where that underflows."""
+        return tails.t_two_sided_log10(self.ratio, self.result.law.degrees_of_freedom)
+
+    @cached_property
+    def p_value_given_others(self) -> Vector:
+        """P-value of each conditional term.
+
+        It is chi-square(1) where the covariance is known, else
+        ``term (nu - p + 1)/(nu + T2 of the others)`` is F(1, nu - p + 1); Rencher and Christensen
+        2012, section 5.9.
+        """
+        return _conditional_p_values(self.result, self.term_given_others)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -136,20 +149,18 @@ def follow_up(result: LocationResult, alpha: float) -> FollowUp:
     widths = result.covariance.keep(key, lambda: _widths(result, alpha))
     ratio = result.difference / widths.standard_error
     p_value = tails.t_two_sided(ratio, dof)
-    conditional = _terms_given_others(result)
     return FollowUp(
+        result=result,
         difference=result.difference,
         standard_error=widths.standard_error,
         ratio=ratio,
         p_value=p_value,
-        log10_p_value=tails.t_two_sided_log10(ratio, dof),
         holm_p_value=holm(p_value),
         t_squared_half_width=widths.t_squared,
         bonferroni_half_width=widths.bonferroni,
         separate_half_width=widths.separate,
         term_alone=ratio * ratio,
-        term_given_others=conditional,
-        p_value_given_others=_conditional_p_values(result, conditional),
+        term_given_others=_terms_given_others(result),
     )
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from operator import itemgetter
+
 import numpy as np
 
 from service.stats.arrays import Vector
@@ -25,9 +27,11 @@ def holm(p_values: Vector) -> Vector:
     .. [1] S. Holm, "A simple sequentially rejective multiple test procedure",
        Scandinavian Journal of Statistics 6 (1979) 65-70.
     """
-    order = p_values.argsort(kind="stable")
-    m = p_values.shape[0]
-    steps = np.maximum.accumulate(p_values[order] * np.arange(m, 0, -1))
+    ordered = sorted(enumerate(p_values.tolist()), key=itemgetter(1))
+    m = len(ordered)
     adjusted = np.empty(m)
-    adjusted[order] = np.minimum(steps, 1.0)
+    largest = 0.0
+    for step, (place, p_value) in enumerate(ordered):
+        largest = max(largest, (m - step) * p_value)
+        adjusted[place] = min(largest, 1.0)
     return adjusted
