@@ -15,6 +15,11 @@ from marshmallow.validate import Length
 MAXIMUM_ROWS = 10_000
 MAXIMUM_COLUMNS = 100
 
+LARGEST = 1e100
+"""No measured value is larger in size; squares of larger ones would leave the range of a double."""
+
+_NO_NUMBER = f"Give a finite number of at most {LARGEST:g} in size, without quotes."
+
 _INSTANT = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|[+-]\d\d:\d\d)", re.ASCII)
 
 # Categories of Unicode: control characters, halves of surrogate pairs, line and paragraph separators.
@@ -54,7 +59,7 @@ class Number(fields.Field[float]):
     def _deserialize(self, value: Any, attr: str | None, data: Mapping[str, Any] | None, **options: Any) -> float:
         number = as_number(value)
         if number is None:
-            raise ValidationError("Give a finite number, without quotes.")
+            raise ValidationError(_NO_NUMBER)
         if self.above is not None and not number > self.above:
             raise ValidationError(f"Give a number greater than {self.above:g}.")
         if self.below is not None and not number < self.below:
@@ -75,7 +80,18 @@ def as_number(value: object) -> float | None:
         number = float(value) + 0.0
     except OverflowError:
         return None
-    return number if math.isfinite(number) else None
+    return number if abs(number) <= LARGEST else None
+
+
+def _in_range(table: list[list[float]]) -> list[Any] | None:
+    """Return a table of numbers as floats, or None where one is not finite or too large."""
+    try:
+        floats = [[cell + 0.0 for cell in row] for row in table]
+    except OverflowError:
+        return None
+    within = min(map(min, floats)) >= -LARGEST and max(map(max, floats)) <= LARGEST
+    # A comparison may pass over NaN; a sum does not.
+    return floats if within and not math.isnan(sum(map(sum, floats))) else None
 
 
 class Count(fields.Integer):
@@ -234,7 +250,7 @@ class Matrix(fields.Field[list[list[float | None]]]):
             raise ValidationError(f"Give at most {MAXIMUM_ROWS} rows of at most {MAXIMUM_COLUMNS} numbers.")
         width = len(value[0])
         plain = all(type(row) is list and len(row) == width and set(map(type, row)) <= {float, int} for row in value)
-        return (_finite(value) if plain else None) or self._cell_by_cell(value, width)
+        return (_in_range(value) if plain else None) or self._cell_by_cell(value, width)
 
     def _cell_by_cell(self, value: list[Any], width: int) -> list[list[float | None]]:
         faults: dict[int, Any] = {}
@@ -260,13 +276,4 @@ class Matrix(fields.Field[list[list[float | None]]]):
         if isinstance(cell, dict):
             return "Results below or above a limit are not taken here; give a number."
         number = as_number(cell)
-        return "Give a finite number, without quotes." if number is None else number
-
-
-def _finite(table: list[list[float]]) -> list[Any] | None:
-    """Return a table of numbers as floats, or None where its sum is not finite, so that each cell must be looked at."""
-    try:
-        floats = [[cell + 0.0 for cell in row] for row in table]
-    except OverflowError:
-        return None
-    return floats if math.isfinite(sum(map(sum, floats))) else None
+        return _NO_NUMBER if number is None else number

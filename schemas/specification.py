@@ -10,6 +10,9 @@ from marshmallow import ValidationError, fields, validates_schema
 from schemas.base import Shape
 from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, Matrix, Name, Number, Text, entries
 
+SMALLEST_LEVEL = 1e-12
+"""Below this a level cannot be told from never rejecting, and critical values leave the range of a double."""
+
 SCREENS = (
     "completeness",
     "resolution",
@@ -103,7 +106,7 @@ class QuestionSchema(Shape):
 class ScreenSchema(Shape):
     """How one screen is applied."""
 
-    level = Number(above=0, most=0.5)
+    level = Number(least=SMALLEST_LEVEL, most=0.5)
     on_failure = Choice("hold", "note", "sign-flip")
     required = Flag()
 
@@ -115,7 +118,7 @@ class SpecificationSchema(Shape):
     title = Text(longest=200)
     characteristics = fields.List(fields.Nested(CharacteristicSchema), required=True, validate=entries(MAXIMUM_COLUMNS))
     covariance = fields.Nested(CovarianceSchema, required=True)
-    significance_level = Number(required=True, above=0, most=0.5)
+    significance_level = Number(required=True, least=SMALLEST_LEVEL, most=0.5)
     question = fields.Nested(QuestionSchema, required=True)
     screens = fields.Nested(Shape.from_dict({name: fields.Nested(ScreenSchema) for name in SCREENS}, name="Screens"))
     missing = Choice("refuse", "hold")

@@ -34,8 +34,9 @@ def completeness(batch: Batch, rows: Matrix, names: Sequence[str]) -> ScreenStat
         `statistic` is the number of findings; there is no null law.
     """
     missing = [{"unit": batch.units[i], "characteristic": batch.names[j]} for i, j in batch.missing]
-    copies = _copied_units(rows)
-    constant = [names[j] for j in _constant_columns(rows)]
+    ordered = np.sort(rows, axis=0)
+    copies = _copied_units(rows, ordered)
+    constant = [names[int(j)] for j in np.flatnonzero(ordered[0] == ordered[-1])] if rows.shape[0] > 1 else []
     detail: dict[str, Any] = {}
     if missing:
         detail["missing"] = missing
@@ -48,15 +49,8 @@ def completeness(batch: Batch, rows: Matrix, names: Sequence[str]) -> ScreenStat
     return ScreenStatistic(float(count), None, "none", units=tuple(units), detail=detail)
 
 
-def _constant_columns(rows: Matrix) -> list[int]:
-    if rows.shape[0] < 2:
-        return []
-    return [int(j) for j in np.flatnonzero((rows == rows[0]).all(axis=0))]
-
-
-def _copied_units(rows: Matrix) -> list[list[int]]:
+def _copied_units(rows: Matrix, ordered: Matrix) -> list[list[int]]:
     """Return groups of units whose every value is the same, unless chance makes such copies."""
-    ordered = np.sort(rows, axis=0)
     # Where one characteristic tells every unit from every other, no unit is a copy: the usual case, and quick.
     if (ordered[1:] != ordered[:-1]).all(axis=0).any():
         return []

@@ -42,6 +42,7 @@ MADE_WHEN_ASKED = frozenset({"outlying-robust"})
 
 # These explain, and hold a lot only where the specification says so.
 _NOTED_BY_DEFAULT = frozenset({"marginal-normality", "resolution"})
+_SMALLEST_VARIANCE = 1e-100
 _SYMMETRY = 1e-12
 
 
@@ -239,8 +240,8 @@ def _matrix_faults(matrix: Matrix, p: int) -> list[Fault]:
         text = f"The covariance matrix is {shape}; {p} characteristics need {p} x {p}."
         return [Fault("/covariance/matrix", text, "matrix-shape")]
     faults = []
-    for i in np.flatnonzero(np.diagonal(matrix) <= 0):
-        text = f"Variance {i + 1} is {matrix[i, i]:g}; a variance is positive."
+    for i in np.flatnonzero(np.diagonal(matrix) < _SMALLEST_VARIANCE):
+        text = f"Variance {i + 1} is {matrix[i, i]:g}; a variance is positive, and not below {_SMALLEST_VARIANCE:g}."
         faults.append(Fault(f"/covariance/matrix/{i}/{i}", text, "variance-not-positive"))
     scale = np.sqrt(np.abs(np.diagonal(matrix)))
     for i, j in np.argwhere(np.abs(matrix - matrix.T) > _SYMMETRY * np.outer(scale, scale)):

@@ -9,6 +9,11 @@ Vector = npt.NDArray[np.float64]
 Matrix = npt.NDArray[np.float64]
 
 
+def squared_lengths(rows: Matrix) -> Vector:
+    """Return the squared length of each row, shape (n,) from (n, p)."""
+    return np.asarray(np.add.reduce(rows * rows, axis=1))
+
+
 def frozen(values: npt.ArrayLike) -> npt.NDArray[np.float64]:
     """Return a read-only float64 copy, with -0.0 made 0.0.
 
@@ -23,6 +28,7 @@ def frozen(values: npt.ArrayLike) -> npt.NDArray[np.float64]:
     ndarray of float64
         A copy that refuses assignment.
     """
-    array = np.array(values, dtype=np.float64) + 0.0
+    # One layout, whatever the input's: linear algebra gives the same bits for the same numbers.
+    array = np.array(values, dtype=np.float64, order="C") + 0.0
     array.setflags(write=False)
     return array

@@ -12,7 +12,7 @@ import numpy as np
 from scipy.linalg import lapack
 
 from service.errors import IllConditionedError, NotPositiveDefiniteError
-from service.stats.arrays import Matrix, Vector, frozen
+from service.stats.arrays import Matrix, Vector, frozen, squared_lengths
 
 T = TypeVar("T")
 
@@ -111,8 +111,7 @@ class Covariance:
 
     def squared_distances(self, deviations: Matrix) -> Vector:
         """Return the Mahalanobis squared distance of each row, shape (n,)."""
-        whitened = self.whiten(deviations)
-        return np.asarray(np.einsum("ij,ij->i", whitened, whitened))
+        return squared_lengths(self.whiten(deviations))
 
 
 def factor_covariance(matrix: Matrix, degrees_of_freedom: float = math.inf, *, lasting: bool = False) -> Covariance:

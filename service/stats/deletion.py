@@ -28,7 +28,7 @@ from functools import lru_cache
 import numpy as np
 from scipy import special
 
-from service.stats.arrays import Matrix, Vector
+from service.stats.arrays import Matrix, Vector, squared_lengths
 from service.stats.moments import sample_moments
 
 MAXIMUM = "within-maximum"
@@ -178,8 +178,7 @@ def _afresh(whitened: Matrix, deleted: list[int], stages: int) -> tuple[list[int
     moments = sample_moments(rows, rows[0])
     if moments.whitened is None:
         return [], []
-    squared = np.einsum("ij,ij->i", moments.whitened, moments.whitened)
-    units, ratios = _deleted(moments.whitened, squared, stages)
+    units, ratios = _deleted(moments.whitened, squared_lengths(moments.whitened), stages)
     return [int(kept[i]) for i in units], ratios
 
 

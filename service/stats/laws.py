@@ -4,13 +4,13 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import cached_property, lru_cache
 
 from service.errors import TooFewUnitsError
 from service.stats import tails
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class QuadraticLaw:
     """Law of ``T2 = k d' Sigma^-1 d`` where the mean agrees with its target.
 
@@ -48,18 +48,18 @@ class QuadraticLaw:
                 "Measure more units, or use a specification with a reference covariance."
             )
 
-    @property
+    @cached_property
     def is_chi_square(self) -> bool:
         """Whether the covariance is known."""
         return math.isinf(self.degrees_of_freedom)
 
-    @property
+    @cached_property
     def parameters(self) -> tuple[float, ...]:
         """Degrees of freedom of the chi-square law, or of the F law."""
         p = float(self.dimension)
         return (p,) if self.is_chi_square else (p, self.degrees_of_freedom - p + 1)
 
-    @property
+    @cached_property
     def factor(self) -> float:
         """The number that turns ``T2`` into its chi-square or F equivalent."""
         if self.is_chi_square:
@@ -80,7 +80,19 @@ class QuadraticLaw:
 
     def over(self, size: int) -> QuadraticLaw:
         """Return the law of the same form over `size` of the characteristics."""
-        return QuadraticLaw(size, self.degrees_of_freedom)
+        return quadratic_law(size, self.degrees_of_freedom)
+
+
+@lru_cache(maxsize=1024)
+def quadratic_law(dimension: int, degrees_of_freedom: float) -> QuadraticLaw:
+    """Return the law, the same object for the same numbers.
+
+    Raises
+    ------
+    TooFewUnitsError
+        Where the law does not exist.
+    """
+    return QuadraticLaw(dimension, degrees_of_freedom)
 
 
 @lru_cache(maxsize=4096)

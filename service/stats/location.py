@@ -22,7 +22,7 @@ import numpy as np
 
 from service.stats.arrays import Vector
 from service.stats.covariance import Covariance, factor_covariance
-from service.stats.laws import QuadraticLaw
+from service.stats.laws import QuadraticLaw, quadratic_law
 from service.stats.moments import Moments
 
 
@@ -91,7 +91,7 @@ def mean_test(difference: Vector, covariance: Covariance, effective_units: float
     TooFewUnitsError
         Where the covariance has fewer than p degrees of freedom.
     """
-    law = QuadraticLaw(covariance.dimension, covariance.degrees_of_freedom)
+    law = quadratic_law(covariance.dimension, covariance.degrees_of_freedom)
     whitened = covariance.whiten(difference)
     squared = float(whitened @ whitened)
     distance = math.sqrt(squared)

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from service.errors import IllConditionedError, NotPositiveDefiniteError, TooFewUnitsError
-from service.stats.arrays import Matrix, Vector
+from service.stats.arrays import Matrix, Vector, squared_lengths
 from service.stats.covariance import Covariance, factor_covariance
 
 Obstacle = TooFewUnitsError | NotPositiveDefiniteError | IllConditionedError
@@ -34,6 +34,8 @@ class Moments:
         S factored, or None where it cannot be.
     whitened : ndarray, shape (n, p), or None
         Centred rows whitened with S (so ``W'W = (n - 1) I``), or None.
+    squared_distances : ndarray, shape (n,), or None
+        Of the units from their mean, ``(y - ybar)' S^-1 (y - ybar)``.
     obstacle : ServiceError or None
         Why `covariance` is None.
     """
@@ -44,6 +46,7 @@ class Moments:
     scatter: Matrix
     covariance: Covariance | None
     whitened: Matrix | None
+    squared_distances: Vector | None
     obstacle: Obstacle | None
 
     @property
@@ -90,11 +93,12 @@ def sample_moments(x: Matrix, mu0: Vector) -> Moments:
     difference += correction
     if n == 1:
         nothing = TooFewUnitsError("One unit has no sample covariance.")
-        return Moments(deviations, difference, centred, np.full((p, p), math.nan), None, None, nothing)
+        return Moments(deviations, difference, centred, np.full((p, p), math.nan), None, None, None, nothing)
     scatter = centred.T @ centred / (n - 1)
     covariance, obstacle = _factored(scatter, n, x[0])
     whitened = None if covariance is None else covariance.whiten(centred)
-    return Moments(deviations, difference, centred, scatter, covariance, whitened, obstacle)
+    squared = None if whitened is None else squared_lengths(whitened)
+    return Moments(deviations, difference, centred, scatter, covariance, whitened, squared, obstacle)
 
 
 def _factored(scatter: Matrix, n: int, unit: Vector) -> tuple[Covariance | None, Obstacle | None]:

@@ -25,7 +25,7 @@ from functools import lru_cache
 import numpy as np
 
 from service.stats import tails
-from service.stats.arrays import Matrix, Vector
+from service.stats.arrays import Matrix, Vector, squared_lengths
 from service.stats.moments import Moments
 from service.stats.screen import NullLaw, ScreenStatistic, not_applicable, unjudgeable
 
@@ -146,7 +146,7 @@ def kurtosis_of(whitened: Matrix) -> float:
     .. [1] Mardia 1970, equation 3.5.
     """
     n = whitened.shape[0]
-    squared = np.einsum("ij,ij->i", whitened, whitened)
+    squared = squared_lengths(whitened)
     return float(squared @ squared * n / (n - 1.0) ** 2)
 
 
@@ -160,7 +160,7 @@ def henze_zirkler_of(whitened: Matrix) -> float:
     n, p = whitened.shape
     b2 = _beta(n, p) ** 2
     scaled = whitened * math.sqrt(b2 * n / (n - 1))
-    halves = np.einsum("ij,ij->i", scaled, scaled)
+    halves = squared_lengths(scaled)
     halves *= 0.5
     between = 0.0
     for rows in _stripes(n):

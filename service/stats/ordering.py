@@ -94,8 +94,8 @@ def of_many(whitened: Matrix) -> Mapping[str, Vector]:
 
 def _autocorrelations(centred: Matrix) -> Vector:
     """Return the lag-one autocorrelation of each column, shape (p,)."""
-    lagged = np.einsum("ij,ij->j", centred[1:], centred[:-1])
-    return np.asarray(lagged / np.einsum("ij,ij->j", centred, centred))
+    lagged = np.add.reduce(centred[1:] * centred[:-1], axis=0)
+    return np.asarray(lagged / np.add.reduce(centred * centred, axis=0))
 
 
 def _increases(sequence: Vector) -> bool:

@@ -24,7 +24,7 @@ from scipy import special
 
 from service.stats.covariance import Covariance
 from service.stats.deletion import MAXIMUM, SEQUENTIAL, Stages, delete_in_turn, most_deleted
-from service.stats.laws import QuadraticLaw
+from service.stats.laws import QuadraticLaw, quadratic_law
 from service.stats.moments import Moments, sample_moments
 from service.stats.screen import ScreenStatistic, not_applicable
 
@@ -58,14 +58,14 @@ def against_specification(
     p, n = sigma0.dimension, moments.units
     if sigma0.degrees_of_freedom < p:
         return not_applicable(f"the reference covariance has fewer than {p} degrees of freedom")
-    law = QuadraticLaw(p, sigma0.degrees_of_freedom)
+    law = quadratic_law(p, sigma0.degrees_of_freedom)
     k = 1.0 if math.isinf(target_units) else target_units / (target_units + 1)
     squared = sigma0.squared_distances(moments.deviations)
     largest = float(squared.max())
     single = law.tail(k * largest).p_value
     limit = law.critical_value(-math.expm1(math.log1p(-level) / n)) / k
     detail = {"squared_distances": squared.tolist(), "limit": limit}
-    units = tuple(int(i) for i in np.flatnonzero(squared >= limit))
+    units = tuple(int(i) for i in np.flatnonzero(squared >= limit)) if largest >= limit else ()
     return ScreenStatistic(largest, sidak(single, n), "exact", units=units, detail=detail)
 
 
@@ -115,9 +115,9 @@ def within_batch(moments: Moments, table: MaximumLaw | None, level: float) -> Sc
     n, p = moments.units, moments.dimension
     if n <= p + 1:
         return not_applicable(f"{n} units of {p} characteristics all lie equally far out; at least {p + 2} are needed")
-    if moments.whitened is None:
+    if moments.whitened is None or moments.squared_distances is None:
         return not_applicable(str(moments.obstacle))
-    squared = np.einsum("ij,ij->i", moments.whitened, moments.whitened)
+    squared = moments.squared_distances
     stages = delete_in_turn(moments.whitened, squared)
     p_value = _p_value_of(stages.strongest, stages.size, table)
     units = _suspected(moments, stages, table, level) if p_value <= level else ()

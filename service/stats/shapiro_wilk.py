@@ -96,7 +96,7 @@ def shapiro_wilk(ordered: Matrix) -> tuple[Vector, Vector]:
     """
     n = ordered.shape[0]
     scaled = ordered / (ordered[-1] - ordered[0])
-    length = np.sqrt(np.einsum("ij,ij->j", scaled, scaled))
+    length = np.sqrt(np.add.reduce(scaled * scaled, axis=0))
     slope = weights(n) @ scaled
     # 1 - W as a product keeps its digits where W is near 1.
     lack = np.maximum((length - slope) * (length + slope) / (length * length), 1e-300)

@@ -85,6 +85,8 @@ def test_what_is_not_strict_json_is_malformed(border: Border, body: bytes, statu
         (_cell("true"), "/batch/rows/0/0"),
         (_cell('{"below": 600}'), "/batch/rows/0/0"),
         (_cell("628.20000000000000001"), "/batch/rows/0/0"),
+        (_cell("1e101"), "/batch/rows/0/0"),
+        (_cell("-1e101"), "/batch/rows/0/0"),
         (_cell("628.2, 1.0"), "/batch/rows/1"),
         (_changed(rows=[]), "/batch/rows"),
         (_changed(rows=[[]]), "/batch/rows"),

@@ -291,3 +291,14 @@ def test_an_answer_does_not_depend_on_units_of_measurement(seed: int) -> None:
     for a, b in zip(one["screens"], other["screens"], strict=True):
         assert b["state"] == a["state"]
         assert (b["p_value"] or 0.0) == pytest.approx(a["p_value"] or 0.0, rel=1e-9, abs=1e-12)
+
+
+def test_values_as_far_off_as_the_border_lets_through_still_give_numbers() -> None:
+    rows = sample("far", 12)
+    rows[0] = [1e100, -1e100, 1e100, 0.0, 1e100]
+    characteristics = load.specification()["characteristics"]
+    for item in characteristics:
+        del item["lower_bound"]
+    evaluation = judged(rows, characteristics=characteristics)
+    assert evaluation.outcome == "held"
+    assert _all_finite(evaluation.to_dict())

@@ -51,7 +51,7 @@ def test_every_rule_and_method_stands_in_the_document() -> None:
 
 def test_bounds_are_open_or_closed_as_they_are_kept() -> None:
     properties = WHOLE["components"]["schemas"]["Specification"]["properties"]
-    assert properties["significance_level"] == {"type": "number", "exclusiveMinimum": 0, "maximum": 0.5}
+    assert properties["significance_level"] == {"type": "number", "minimum": 1e-12, "maximum": 0.5}
     assert _small()["components"]["schemas"]["Group"]["properties"]["share"] == {
         "type": "number",
         "exclusiveMinimum": 0,
