@@ -7,13 +7,13 @@ Order of the rule:
 
 1. Values are matched to the specification; what does not fit is an error, not an outcome.
 2. Where cells are missing and the specification says ``hold``, the lot is held without a test.
-3. The mean test is made, and the question answered: agree, differ, or undecided.
-   Where a joint screen throws doubt on normality, the sign-flip law of the same statistic stands beside
-   it, and decides the difference question where every failed screen says so.
-4. The screens are made.  One that throws doubt on the test itself holds the lot, whatever the test
-   said.  Units outlying against the specification do not throw doubt on a rejection (a shifted mean
-   carries its units with it), so they hold only a lot that would otherwise be accepted.
-5. An acceptance without the required power is held.
+3. The mean test and the screens are made.  Where a joint screen throws doubt on normality, the sign-flip
+   law of the same statistic stands beside it.
+4. The question is answered: agree, differ, or undecided.  Sign flips answer the difference question where
+   the failed screens leave it to them.  An acceptance without the required power is undecided.
+5. A screen that throws doubt on the test itself holds the lot, whatever the test said.  Units outlying
+   against the specification do not throw doubt on a rejection (a shifted mean carries its units with
+   it), so they hold only a lot that would otherwise be accepted.
 """
 
 from __future__ import annotations

@@ -70,12 +70,14 @@ class Covariance:
         """Return what `make` computes from this covariance alone: once for a lasting one, else every time."""
         if not self.lasting:
             return make()
-        if key not in self._kept:
+        # Threads share this: what one has found stays its own, whatever another clears.
+        found: T | None = self._kept.get(key)
+        if found is None:
+            found = make()
             if len(self._kept) >= _MOST_KEPT:
                 self._kept.clear()
-            self._kept[key] = make()
-        kept: T = self._kept[key]
-        return kept
+            self._kept[key] = found
+        return found
 
     def whiten(self, deviations: Matrix) -> Matrix:
         """Return ``L^-1 D^-1 y`` for each row y, so that the rows have unit covariance.

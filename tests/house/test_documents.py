@@ -10,10 +10,12 @@ from pathlib import Path
 
 import pytest
 
+from schemas.specification import SCREENS
 from service.cli import main
 from service.config import SETTINGS
 from service.demo.run import Demonstration, run_lots
 from service.domain.actor import ROLES
+from service.domain.specification import SCREEN_NAMES
 
 ROOT = Path(__file__).parents[2]
 README = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -27,6 +29,15 @@ def test_every_setting_is_documented_with_its_meaning(name: str) -> None:
 @pytest.mark.parametrize("command", sorted(main.commands))
 def test_every_command_is_documented(command: str) -> None:
     assert f"`acceptance {command}" in README
+
+
+@pytest.mark.parametrize("screen", SCREEN_NAMES)
+def test_every_screen_is_documented(screen: str) -> None:
+    assert f"`{screen}`" in README
+
+
+def test_shapes_and_meaning_know_the_same_screens() -> None:
+    assert SCREENS == SCREEN_NAMES
 
 
 def test_every_role_is_documented() -> None:
