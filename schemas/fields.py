@@ -18,7 +18,7 @@ MAXIMUM_COLUMNS = 100
 LARGEST = 1e100
 """No measured value is larger in size; squares of larger ones would leave the range of a double."""
 
-_NO_NUMBER = f"Give a finite number of at most {LARGEST:g} in size, without quotes."
+_NO_NUMBER = "Give a finite number of at most 1e100 in size, without quotes."
 
 _INSTANT = re.compile(r"\d{4}-\d\d-\d\dT\d\d:\d\d:\d\d(\.\d{1,6})?(Z|[+-]\d\d:\d\d)", re.ASCII)
 
@@ -81,17 +81,6 @@ def as_number(value: object) -> float | None:
     except OverflowError:
         return None
     return number if abs(number) <= LARGEST else None
-
-
-def _in_range(table: list[list[float]]) -> list[Any] | None:
-    """Return a table of numbers as floats, or None where one is not finite or too large."""
-    try:
-        floats = [[cell + 0.0 for cell in row] for row in table]
-    except OverflowError:
-        return None
-    within = min(map(min, floats)) >= -LARGEST and max(map(max, floats)) <= LARGEST
-    # A comparison may pass over NaN; a sum does not.
-    return floats if within and not math.isnan(sum(map(sum, floats))) else None
 
 
 class Count(fields.Integer):
@@ -277,3 +266,15 @@ class Matrix(fields.Field[list[list[float | None]]]):
             return "Results below or above a limit are not taken here; give a number."
         number = as_number(cell)
         return _NO_NUMBER if number is None else number
+
+
+def _in_range(table: list[list[float]]) -> list[Any] | None:
+    """Return a table of numbers as floats, or None where each cell must be looked at."""
+    try:
+        floats = [[cell + 0.0 for cell in row] for row in table]
+    except OverflowError:
+        return None
+    # A sum that is no number says that a cell is none, which comparisons would not.
+    if math.isnan(sum(map(sum, floats))):
+        return None
+    return floats if min(map(min, floats)) >= -LARGEST and max(map(max, floats)) <= LARGEST else None
