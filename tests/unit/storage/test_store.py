@@ -10,8 +10,10 @@ import pytest
 import sqlalchemy as sa
 from alembic.autogenerate import compare_metadata
 from alembic.runtime.migration import MigrationContext
+from alembic.script import ScriptDirectory
 
 from service.errors import StoreUnavailableError
+from service.storage import schema
 from service.storage.engine import writing_engine
 from service.storage.rows import Columns, Filters, Received, TokenRow, VersionRow
 from service.storage.store import Store
@@ -58,6 +60,11 @@ def test_the_schema_is_what_the_tables_say(url: str) -> None:
     with engine.connect() as connection:
         assert compare_metadata(MigrationContext.configure(connection), metadata) == []
     engine.dispose()
+
+
+def test_the_head_revision_is_that_of_the_newest_migration() -> None:
+    scripts = ScriptDirectory(str(schema.MIGRATIONS))
+    assert scripts.get_heads() == [schema.HEAD]
 
 
 def test_what_is_added_reads_back(store: Store) -> None:
