@@ -13,6 +13,9 @@ from schemas.fields import MAXIMUM_COLUMNS, Choice, Code, Count, Flag, Instant, 
 SMALLEST_LEVEL = 1e-12
 """Below this a level cannot be told from never rejecting, and critical values leave the range of a double."""
 
+MOST_REFERENCE_DATA = 1e9
+"""Nobody measures more units; a covariance better known than by these is of kind known."""
+
 SCREENS = (
     "completeness",
     "resolution",
@@ -64,8 +67,12 @@ class CovarianceSchema(Shape):
         },
     )
     matrix = Matrix(metadata={"description": "p x p, symmetric, in products of the units of measurement."})
-    degrees_of_freedom = Number(above=0)
-    target_units = Number(above=0, metadata={"description": "Units behind an estimated target; absent where fixed."})
+    degrees_of_freedom = Number(least=1, most=MOST_REFERENCE_DATA)
+    target_units = Number(
+        least=1,
+        most=MOST_REFERENCE_DATA,
+        metadata={"description": "Units behind an estimated target; absent where fixed."},
+    )
 
     @validates_schema(pass_original=True, skip_on_field_errors=False)
     def _members_of_kind(self, data: dict[str, Any], original: object, **_: Any) -> None:

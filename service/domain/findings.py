@@ -32,6 +32,7 @@ _LAWS = MappingProxyType(
     {
         "outlying-against-specification": "the specification",
         "outlying-within-batch": "the spread of the batch itself",
+        "outlying-robust": "the bulk of the batch",
     }
 )
 

@@ -36,7 +36,7 @@ Numbers = TypeVar("Numbers", float, Vector)
 NAME = "dispersion"
 """Name of the null law, of the likelihood ratio where n > p and of Ledoit and Wolf's statistic elsewhere."""
 
-_SMALLEST = 1e-15
+_SMALLEST, _LARGEST = 1e-15, 1e100
 """Eigenvalues count as at least this, so that a constant characteristic gives a large number and not infinity."""
 
 
@@ -54,7 +54,7 @@ def against_reference(moments: Moments, sigma0: Covariance, table: UpperLaw | No
     Parameters
     ----------
     moments : Moments
-        Of n >= 2 units; n > p where the reference covariance is an estimate.
+        Of n >= 3 units, or 2 of one characteristic; n > p where the reference covariance is an estimate.
     sigma0 : Covariance
         Reference covariance, known or with nu degrees of freedom.
     table : NullTable or None
@@ -75,6 +75,9 @@ def against_reference(moments: Moments, sigma0: Covariance, table: UpperLaw | No
         return not_applicable("one unit has no spread")
     if math.isfinite(nu) and (n <= p or nu < p):
         return not_applicable(f"two estimated covariances of {p} characteristics need more than {p} units each")
+    if n == 2 and p > 1:
+        # The statistic would be p(p+1)/2 - tr V, which falls as the spread grows.
+        return not_applicable(f"two units say too little of the spread of {p} characteristics")
     eigen = _eigen(moments, sigma0)
     detail: dict[str, object] = {"eigenvalues": eigen.values.tolist()}
     result = _box(eigen, n - 1, nu, detail) if math.isfinite(nu) else _against_known(eigen.values, n, table, detail)
@@ -96,8 +99,11 @@ def _against_known(values: Vector, n: int, table: UpperLaw | None, detail: dict[
         statistic = corrected_ratio(float(np.log(values).sum()), float(values.sum()), n, p)
     else:
         detail["method"] = "Ledoit-Wolf"
+        # Beyond this size nothing is left to tell, and squares would leave the range of a double.
+        values = np.minimum(values, _LARGEST)
         statistic = ledoit_wolf(float(values.sum()), float(values @ values), n, p)
-    asymptotic = tails.chi_square_tail(statistic, p * (p + 1) / 2).p_value
+    # Ledoit and Wolf's statistic can be below 0, where its large-sample law cannot.
+    asymptotic = tails.chi_square_tail(max(0.0, statistic), p * (p + 1) / 2).p_value
     if table is None:
         return ScreenStatistic(statistic, asymptotic, "asymptotic", detail=detail)
     return ScreenStatistic(statistic, table.upper(NAME, statistic), "monte-carlo", asymptotic, detail=detail)

@@ -46,6 +46,7 @@ _TRACY_WIDOM_95 = 0.9793
 """Upper 5% point of the Tracy-Widom law of order 1."""
 
 _AS_GOOD_AS_KNOWN = 1e7
+_LARGEST_LOG = 300.0
 _NORMAL_95 = 1.96
 
 
@@ -80,7 +81,8 @@ def describe(eigen: Eigen, moments: Moments, sigma0: Covariance) -> dict[str, ob
     Returns
     -------
     dict
-        ``direction``; ``expected_range`` of the eigenvalues; ``log_volume``, ``ln |S|/|Sigma0|``, with
+        ``direction``; ``expected_range`` of the eigenvalues, its upper end None where there is none;
+        ``log_volume``, ``ln |S|/|Sigma0|``, with
         its standardised value ``log_volume_z`` (None for n <= p); ``mean_variance_ratio``;
         ``proportionality_p_value``, small where size alone does not explain the difference (None for
         n <= p or an estimated reference); ``standard_deviation_ratios``, batch to reference, shape
@@ -95,7 +97,7 @@ def describe(eigen: Eigen, moments: Moments, sigma0: Covariance) -> dict[str, ob
     scatter = moments.scatter / sigma0.scale / sigma0.scale[:, None]
     return {
         "direction": _direction(eigen.values, (low, high), z, f1),
-        "expected_range": [low, high],
+        "expected_range": [low, high if math.isfinite(high) else None],
         "log_volume": float(np.log(eigen.values).sum()) if f1 >= p else None,
         "log_volume_z": z,
         "mean_variance_ratio": float(eigen.values.mean()),
@@ -169,21 +171,29 @@ def eigenvalue_range(p: int, f1: float, f2: float) -> tuple[float, float]:
     Returns
     -------
     tuple of float
-        Lower and upper end; the lower is 0 for f1 < p.  Johnstone 2008: ``ln(f1 l/f2)`` of the
+        Lower and upper end; the lower is 0 for f1 <= p, the upper infinite for f2 <= p.
+        Johnstone 2008: ``ln(f1 l/f2)`` of the
         largest eigenvalue l is about ``mu + sigma TW1``; the smallest is the reciprocal of the
         largest of ``S1^-1 S2``.
     """
     f2 = min(f2, _AS_GOOD_AS_KNOWN)
-    upper = f2 / f1 * math.exp(_largest(p, f2, f1))
-    lower = f2 / f1 * math.exp(-_largest(p, f1, f2)) if f1 >= p else 0.0
-    return lower, upper
+    above = _largest(p, f2, f1)
+    upper = f2 / f1 * math.exp(above) if above < _LARGEST_LOG else math.inf
+    return f2 / f1 * math.exp(-_largest(p, f1, f2)), upper
 
 
 def _largest(p: int, m: float, n: float) -> float:
-    """Return the upper 5% point of the log of the largest eigenvalue of ``A^-1 B``, A and B Wishart on m and n."""
+    """Return the upper 5% point of the log of the largest eigenvalue of ``A^-1 B``, A and B Wishart on m and n.
+
+    Infinite for m <= p: at m = p the angles below add up to pi, where the approximation has its pole.
+    """
+    if m <= p:
+        return math.inf
     total = m + n - 1
     gamma = 2 * math.asin(math.sqrt((min(p, n) - 0.5) / total))
     phi = 2 * math.asin(math.sqrt((max(p, n) - 0.5) / total))
+    if phi + gamma >= math.pi:
+        return math.inf
     mu = 2 * math.log(math.tan((phi + gamma) / 2))
     cubed = 16 / (total**2 * math.sin(phi + gamma) ** 2 * math.sin(phi) * math.sin(gamma))
     return float(mu + _TRACY_WIDOM_95 * cubed ** (1 / 3))

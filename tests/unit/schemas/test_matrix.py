@@ -54,6 +54,11 @@ def test_cells_up_to_the_largest_size_are_taken_and_larger_ones_named() -> None:
     assert set(_faults([[1.7e308, 1.0, 1.7e308], [-1.1e100, 0.0, 1.0]])) == {0, 1}
 
 
+@pytest.mark.parametrize("row", [[1.0, math.nan], [math.nan, 1.0], [math.nan, 10**400], [1.0, -math.inf]])
+def test_no_comparison_passes_over_what_is_no_number(row: list[float]) -> None:
+    assert set(_faults([[1.0, 2.0], row])) == {1}
+
+
 def test_minus_zero_becomes_zero_in_every_cell() -> None:
     for table in ([[-0.0, 1.0]], [[-0.0, 1e100, -1e100]]):
         assert math.copysign(1, Matrix().deserialize(table)[0][0]) == 1.0

@@ -130,3 +130,30 @@ def test_estimated_reference_needs_more_units_than_characteristics() -> None:
 
 def test_difference_is_described_only_where_significant() -> None:
     assert "direction" not in _against(batches.clean(20, 3, 3), np.eye(3), level=1e-6).detail
+
+
+@pytest.mark.parametrize("size", [1e3, 1e50, 1e100])
+def test_one_wild_value_among_few_units_is_significant_however_wild(size: float) -> None:
+    rows = np.zeros((3, 5))
+    rows[1, 1] = size
+    found = _against(rows, np.eye(5))
+    assert found.statistic is not None
+    assert math.isfinite(found.statistic)
+    assert found.p_value == pytest.approx(0.0, abs=1e-12)
+
+
+def test_a_statistic_below_zero_has_a_large_sample_p_value_of_one() -> None:
+    # Three units on an equilateral triangle: both eigenvalues are 10.
+    radius = math.sqrt(20 / 1.5)
+    rows = np.zeros((3, 5))
+    rows[:, :2] = radius * np.array([[1.0, 0.0], [-0.5, math.sqrt(0.75)], [-0.5, -math.sqrt(0.75)]])
+    found = _against(rows, np.eye(5), level=1e-12)
+    assert found.statistic == pytest.approx(-22.5, rel=1e-12)
+    assert found.p_value == 1.0
+
+
+@pytest.mark.parametrize("spread", [1e-3, 1.0, 1e3])
+def test_two_units_of_several_characteristics_are_too_few(spread: float) -> None:
+    found = _against(np.array([[0.0, 0.0], [spread, -spread]]), np.eye(2))
+    assert not found.applicable
+    assert "two units" in found.why

@@ -112,3 +112,13 @@ def test_one_characteristic_has_no_proportions() -> None:
     found = dispersion.against_reference(batches.moments(rows), sigma, None, 1.0).detail
     assert found["proportionality_p_value"] is None
     assert (found["direction"], found["angle"]) == ("wider", 0.0)
+
+
+@pytest.mark.parametrize("p", [1, 2, 5, 20])
+@pytest.mark.parametrize("f2", [1.0, 4.9, 5.0, 5.0000001, 6.0, 118.0, 1e7, 1e9, math.inf])
+@pytest.mark.parametrize("f1", [1.0, 2.0, 5.0, 6.0, 30.0, 9999.0])
+def test_the_range_of_eigenvalues_exists_at_every_number_of_degrees_of_freedom(p: int, f1: float, f2: float) -> None:
+    low, high = spread.eigenvalue_range(p, f1, f2)
+    assert 0 <= low < high
+    assert (low == 0) >= (f1 <= p)
+    assert math.isinf(high) >= (f2 <= p)
