@@ -43,6 +43,7 @@ MADE_WHEN_ASKED = frozenset({"outlying-robust"})
 # These explain, and hold a lot only where the specification says so.
 _NOTED_BY_DEFAULT = frozenset({"marginal-normality", "resolution"})
 _SMALLEST_VARIANCE = 1e-100
+_FARTHEST = 1e50
 _SYMMETRY = 1e-12
 
 
@@ -101,7 +102,8 @@ class Specification:
     target : ndarray, shape (p,)
         The approved mean vector mu0, in units of measurement.
     lower_bounds, upper_bounds : ndarray, shape (p,)
-        Physical bounds of a single value; infinite where none is declared.
+        Physical bounds of a single value; where none is declared, 1e50 reference standard deviations
+        from the target, beyond which no statistic has a double, or infinite without a reference.
     tolerances : ndarray, shape (p,), or None
         Largest difference of each mean that does not matter (equivalence by box).
     covariance_kind : str
@@ -167,13 +169,15 @@ class Specification:
         refuse_any(_faults(data) + faults, "specification")
         tolerances = [item.get("tolerance") for item in characteristics]
         covariance = data["covariance"]
+        target = frozen([item["target"] for item in characteristics])
+        reach = np.inf if sigma0 is None else _FARTHEST * sigma0.scale
         return cls(
             code=data["code"],
             names=tuple(item["name"] for item in characteristics),
             measurement_units=tuple(item["measurement_unit"] for item in characteristics),
-            target=frozen([item["target"] for item in characteristics]),
-            lower_bounds=_bounds(characteristics, "lower_bound", -math.inf),
-            upper_bounds=_bounds(characteristics, "upper_bound", math.inf),
+            target=target,
+            lower_bounds=np.maximum(_bounds(characteristics, "lower_bound", -math.inf), target - reach),
+            upper_bounds=np.minimum(_bounds(characteristics, "upper_bound", math.inf), target + reach),
             tolerances=None if None in tolerances else frozen([float(t) for t in tolerances]),
             covariance_kind=covariance["kind"],
             sigma0=sigma0,

@@ -14,7 +14,7 @@ from service.domain.batch import Batch
 from service.domain.policy import Evaluation, evaluate
 from service.domain.reasons import CATALOGUE
 from service.domain.specification import SCREEN_NAMES, Specification
-from service.errors import NotPositiveDefiniteError, TooFewUnitsError
+from service.errors import InvalidContentError, NotPositiveDefiniteError, TooFewUnitsError
 from service.stats.arrays import Matrix
 from service.stats.null_laws import NullLaws
 from service.stats.randomisation import normal_batches
@@ -293,12 +293,24 @@ def test_an_answer_does_not_depend_on_units_of_measurement(seed: int) -> None:
         assert (b["p_value"] or 0.0) == pytest.approx(a["p_value"] or 0.0, rel=1e-9, abs=1e-12)
 
 
-def test_values_as_far_off_as_the_border_lets_through_still_give_numbers() -> None:
+def test_values_beyond_any_statistic_are_refused_where_they_stand() -> None:
     rows = sample("far", 12)
-    rows[0] = [1e100, -1e100, 1e100, 0.0, 1e100]
-    characteristics = load.specification()["characteristics"]
-    for item in characteristics:
-        del item["lower_bound"]
-    evaluation = judged(rows, characteristics=characteristics)
+    rows[0, 0], rows[5, 3] = 1e100, -1e100
+    characteristics = [item | {"lower_bound": -1e100} for item in load.specification()["characteristics"]]
+    with pytest.raises(InvalidContentError) as caught:
+        judged(rows, characteristics=characteristics)
+    assert [fault.pointer for fault in caught.value.faults] == ["/rows/0/0", "/rows/5/3"]
+
+
+@pytest.mark.parametrize("dof", [None, 20])
+def test_values_as_far_off_as_is_let_through_still_give_numbers(dof: float | None) -> None:
+    matrix = load.specification()["covariance"]["matrix"]
+    covariance = {"kind": "known", "matrix": matrix}
+    if dof:
+        covariance |= {"kind": "reference", "degrees_of_freedom": dof}
+    rows = sample("far", 12)
+    rows[0] += 9e49 * generate.DEVIATIONS
+    characteristics = [item | {"lower_bound": -1e100} for item in load.specification()["characteristics"]]
+    evaluation = judged(rows, characteristics=characteristics, covariance=covariance)
     assert evaluation.outcome == "held"
     assert _all_finite(evaluation.to_dict())
