@@ -16,6 +16,8 @@ from decimal import Decimal
 from pathlib import Path
 from typing import Any
 
+import pytest
+
 HERE = Path(__file__).parent
 
 
@@ -31,6 +33,15 @@ def cases(*calculations: str) -> list[dict[str, Any]]:
 def numbers(case: dict[str, Any], table: str) -> list[tuple[str, Any]]:
     """Return (path, value) for each number in a table of the case, lists taken apart."""
     return list(_flat(case.get(table, {}), ""))
+
+
+def checks(found: list[dict[str, Any]], table: str) -> list[Any]:
+    """Return a parameter set (case, path, value) for each number in a table of the cases."""
+    return [
+        pytest.param(case, path, value, id=f"{case['id']}-{path}")
+        for case in found
+        for path, value in numbers(case, table)
+    ]
 
 
 def _flat(value: Any, path: str) -> Iterator[tuple[str, Any]]:

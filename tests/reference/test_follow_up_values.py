@@ -18,7 +18,7 @@ from service.stats.location import hotelling_test, mean_test
 from service.stats.moments import sample_moments
 from service.stats.power import power
 from service.stats.terms import combination_intervals, given, statistic_over
-from tests.reference.published import at, cases, last_digit, numbers
+from tests.reference.published import at, cases, checks, last_digit
 
 
 def _intervals(case: dict[str, Any]) -> dict[str, Any]:
@@ -136,21 +136,13 @@ CALCULATIONS: dict[str, Callable[[dict[str, Any]], dict[str, Any]]] = {
 CASES = cases(*CALCULATIONS)
 
 
-def _checks(table: str) -> list[Any]:
-    return [
-        pytest.param(case, path, value, id=f"{case['id']}-{path}")
-        for case in CASES
-        for path, value in numbers(case, table)
-    ]
-
-
-@pytest.mark.parametrize(("case", "path", "printed"), _checks("printed"))
+@pytest.mark.parametrize(("case", "path", "printed"), checks(CASES, "printed"))
 def test_follow_up_agrees_with_the_printed_number(case: dict[str, Any], path: str, printed: str) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case), path)
     assert computed == pytest.approx(float(printed), abs=last_digit(printed), rel=0)
 
 
-@pytest.mark.parametrize(("case", "path", "expected"), _checks("recomputed"))
+@pytest.mark.parametrize(("case", "path", "expected"), checks(CASES, "recomputed"))
 def test_follow_up_agrees_with_the_recomputed_number(case: dict[str, Any], path: str, expected: float) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case), path)
     assert computed == pytest.approx(expected, rel=1e-11, abs=0)

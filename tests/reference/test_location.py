@@ -15,7 +15,7 @@ from service.stats.covariance import factor_covariance
 from service.stats.laws import QuadraticLaw
 from service.stats.location import LocationResult, chi_square_test, hotelling_test, reference_test
 from service.stats.moments import sample_moments
-from tests.reference.published import at, cases, last_digit, numbers
+from tests.reference.published import at, cases, checks, last_digit, numbers
 
 # A source that prints every digit of a double prints its own rounding too, times the condition of its covariance.
 ROUNDING = 1e-13
@@ -121,22 +121,14 @@ CALCULATIONS: dict[str, Callable[[dict[str, Any]], dict[str, Any]]] = {
 CASES = cases(*CALCULATIONS)
 
 
-def _checks(table: str) -> list[Any]:
-    return [
-        pytest.param(case, path, value, id=f"{case['id']}-{path}")
-        for case in CASES
-        for path, value in numbers(case, table)
-    ]
-
-
-@pytest.mark.parametrize(("case", "path", "printed"), _checks("printed"))
+@pytest.mark.parametrize(("case", "path", "printed"), checks(CASES, "printed"))
 def test_location_agrees_with_the_printed_number(case: dict[str, Any], path: str, printed: str) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case["inputs"]), path)
     tolerance = max(last_digit(printed), ROUNDING * abs(float(printed)))
     assert computed == pytest.approx(float(printed), abs=tolerance, rel=0)
 
 
-@pytest.mark.parametrize(("case", "path", "expected"), _checks("recomputed"))
+@pytest.mark.parametrize(("case", "path", "expected"), checks(CASES, "recomputed"))
 def test_location_agrees_with_the_recomputed_number(case: dict[str, Any], path: str, expected: float) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case["inputs"]), path)
     assert computed == pytest.approx(expected, rel=1e-10, abs=0)

@@ -12,7 +12,7 @@ from service.stats import normality
 from service.stats.moments import Moments, sample_moments
 from service.stats.ordering import lag_term
 from service.stats.shapiro_wilk import shapiro_wilk
-from tests.reference.published import at, cases, last_digit, numbers
+from tests.reference.published import at, cases, checks, last_digit
 
 
 def _moments(case: dict[str, Any]) -> Moments:
@@ -67,23 +67,16 @@ _CALCULATIONS: dict[str, Callable[[dict[str, Any]], dict[str, Any]]] = {
     "ljung_box": _ljung_box,
     "shapiro_wilk": _shapiro_wilk,
 }
+CASES = cases(*_CALCULATIONS)
 
 
-def _checks(table: str) -> list[Any]:
-    return [
-        pytest.param(case, path, value, id=f"{case['id']}-{path}")
-        for case in cases(*_CALCULATIONS)
-        for path, value in numbers(case, table)
-    ]
-
-
-@pytest.mark.parametrize(("case", "path", "printed"), _checks("printed"))
+@pytest.mark.parametrize(("case", "path", "printed"), checks(CASES, "printed"))
 def test_computed_value_agrees_with_the_printed_digits(case: dict[str, Any], path: str, printed: str) -> None:
     computed = at(_CALCULATIONS[case["calculation"]](case), path)
     assert abs(computed - float(printed)) <= last_digit(printed)
 
 
-@pytest.mark.parametrize(("case", "path", "recomputed"), _checks("recomputed"))
+@pytest.mark.parametrize(("case", "path", "recomputed"), checks(CASES, "recomputed"))
 def test_computed_value_agrees_with_another_program(case: dict[str, Any], path: str, recomputed: float) -> None:
     computed = at(_CALCULATIONS[case["calculation"]](case), path)
     assert computed == pytest.approx(recomputed, rel=1e-11)

@@ -13,7 +13,7 @@ from scipy import linalg
 from service.stats import dispersion, mcd, outliers, robust, robust_laws, spread, tails
 from service.stats.deletion import delete_in_turn
 from service.stats.moments import sample_moments
-from tests.reference.published import at, cases, last_digit, numbers
+from tests.reference.published import at, cases, checks, last_digit, numbers
 
 
 def _moments(case: dict[str, Any]) -> Any:
@@ -103,21 +103,13 @@ CASES = cases(*CALCULATIONS)
 (DELIVERY,) = cases("robust_mcd_exact")
 
 
-def _checks(table: str) -> list[Any]:
-    return [
-        pytest.param(case, path, value, id=f"{case['id']}-{path}")
-        for case in CASES
-        for path, value in numbers(case, table)
-    ]
-
-
-@pytest.mark.parametrize(("case", "path", "printed"), _checks("printed"))
+@pytest.mark.parametrize(("case", "path", "printed"), checks(CASES, "printed"))
 def test_units_and_spread_agree_with_the_printed_number(case: dict[str, Any], path: str, printed: str) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case), path)
     assert computed == pytest.approx(float(printed), abs=last_digit(printed), rel=0)
 
 
-@pytest.mark.parametrize(("case", "path", "expected"), _checks("recomputed"))
+@pytest.mark.parametrize(("case", "path", "expected"), checks(CASES, "recomputed"))
 def test_units_and_spread_agree_with_the_recomputed_number(case: dict[str, Any], path: str, expected: float) -> None:
     computed = at(CALCULATIONS[case["calculation"]](case), path)
     assert computed == pytest.approx(expected, rel=1e-11, abs=0)
