@@ -164,6 +164,8 @@ def _print_verdict(as_json: bool, verdict: dict[str, object]) -> None:
         click.echo(json.dumps(verdict, indent=2))
         return
     for member, value in verdict.items():
+        if value == []:
+            continue
         if isinstance(value, list):
             click.echo(f"{member.replace('_', ' ')}:")
             for item in value:

@@ -1,4 +1,4 @@
-"""Every table takes rows and gives none back: UPDATE, DELETE and replacement are refused by the database itself.
+"""Every table of evidence takes rows and gives none back: UPDATE, DELETE and replacement are refused by the database itself.
 
 SQLite's INSERT OR REPLACE deletes without firing delete triggers, so a guard
 before each insert refuses a key that is there already.  On PostgreSQL,
@@ -13,8 +13,11 @@ from sqlalchemy import Table
 
 from service.storage.tables import metadata
 
-ALL = tuple(table.name for table in metadata.sorted_tables)
-"""Every table there is."""
+CACHES = frozenset({"null_table"})
+"""Tables whose rows can be made anew, and so may be deleted."""
+
+ALL = tuple(table.name for table in metadata.sorted_tables if table.name not in CACHES)
+"""Every table that holds evidence."""
 
 
 def statements(dialect: str, names: Sequence[str]) -> list[str]:

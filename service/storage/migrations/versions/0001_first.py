@@ -18,8 +18,8 @@ TABLES = (
     "idempotency",
     "token",
     "token_revocation",
-    "null_table",
 )
+"""Tables of evidence, in an order in which each refers to earlier ones only."""
 
 
 def row_id() -> sa.types.TypeEngine[int]:
@@ -172,7 +172,7 @@ def upgrade() -> None:
 
 def downgrade() -> None:
     """Take everything away."""
-    for table in reversed(TABLES):
+    for table in ("null_table", *reversed(TABLES)):
         op.drop_table(table)
     if op.get_bind().dialect.name == "postgresql":
         op.execute("DROP FUNCTION refuse_change()")
