@@ -1,4 +1,4 @@
-"""Every table of evidence takes rows and gives none back: UPDATE, DELETE and replacement are refused by the database itself.
+"""Tables of evidence take rows and give none back: the database itself refuses UPDATE, DELETE and replacement.
 
 SQLite's INSERT OR REPLACE deletes without firing delete triggers, so a guard
 before each insert refuses a key that is there already.  On PostgreSQL,
